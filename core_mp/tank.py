@@ -1,0 +1,116 @@
+"""One tank: a raw reading in; level, volume, hydraulic grade and status out.
+
+    head  = (p - p_top + rho_a * g * (z_s - z_ref)) / ((rho - rho_a) * g)
+    level = sensor height + head
+    grade = floor elevation + level + p_top / (rho * g)
+
+p: the sensor's pressure over its reference (vent opening or barometer, at elevation z_ref), z_s: the diaphragm's
+elevation, rho: mean density of the liquid's column, rho_a: density of the air, p_top: gauge pressure in a closed tank's
+headspace. measure() takes one reading through them; companion/figures/convert.py takes columns through the same methods.
+"""
+
+
+class Tank:
+    """A tank with its sensor: where they stand, what they hold.
+
+    transmitter, table: a Transmitter and a StrappingTable. density: the liquid's, a function of temperature [degC], salinity
+    [g/kg] and gauge pressure [Pa], as water.water_density. inside: pressure [Pa, absolute] inside the sensor's reference:
+    None for a gauge sensor, 101325 for a sealed, 0 for an absolute one. height_m: of the diaphragm above tank datum.
+    floor_m: elevation of tank datum. gravity: [m/s2]. t_c: temperature [degC] where none is measured. The reference (vent
+    opening, or barometer): rise_m is the diaphragm's elevation less the reference's, standard_pa the standard atmosphere
+    there, air_per_pa the air's density [kg/m3] for each pascal (earth.py); 0 leaves the air column out.
+    """
+
+    def __init__(self, transmitter, table, density, inside=None, height_m=0.0, floor_m=0.0, gravity=9.80665, t_c=15.0,
+                 salinity=None, rise_m=0.0, standard_pa=101325.0, air_per_pa=0.0):  # fmt: skip
+        self.transmitter = transmitter
+        self.table = table
+        self.inside = inside
+        self.height_m = height_m
+        self.floor_m = floor_m
+        self.t_c = t_c
+        self.standard_pa = standard_pa
+        low, high = transmitter.clear if transmitter.straight else (1, 0)
+        self._quick = (low, high) + transmitter.line
+        self._piece = table.piece
+        self._filling = density, salinity, gravity
+        self._air = air_per_pa * gravity, rise_m
+        self._warmth = None
+
+    def measure(self, raw, temperature_c=None, barometer_pa=None, headspace_pa=None, out=None):
+        """One reading's figures: [status bits, pressure_pa, level_m, volume_m3, grade_m], in out where it is given.
+
+        raw: what the transmitter takes. headspace_pa: gauge. None or an impossible number is missing: temperature outside
+        -5 to 95 degC, barometer outside 30 to 120 kPa. Without a level (a fault) the figures are NaN. Nothing but out is
+        allocated on a board whose floats need no heap.
+        """
+        if out is None:
+            out = [0] * 5
+        low, high, x, p, slope = self._quick
+        out[0] = 0
+        if low <= raw <= high:
+            p += (raw - x) * slope
+        else:
+            out[0] = self.transmitter.status(raw)
+            if out[0] & 515:
+                out[1] = out[2] = out[3] = out[4] = float("nan")
+                return out
+            p = self.transmitter.pressure(raw)
+        if temperature_c is None or temperature_c != self._warmth:
+            if temperature_c is None or not -5 <= temperature_c <= 95:
+                temperature_c = self.t_c
+                out[0] |= 128
+            self.warm(temperature_c)
+        if barometer_pa is None or not 30e3 <= barometer_pa <= 120e3:
+            barometer_pa = self.standard_pa
+            if self.inside is not None:
+                out[0] |= 256
+        if self.inside is not None:
+            p += self.inside - barometer_pa
+        raw = self.level(p, barometer_pa, headspace_pa)
+        low, high, x, y, slope = self._piece
+        if low < raw < high:
+            out[3] = y + (raw - x) * slope
+        else:
+            raw = self._place(raw, out)
+        out[1] = p
+        out[2] = raw
+        raw += self.floor_m
+        out[4] = raw if headspace_pa is None else raw + self.top(p, headspace_pa)
+        return out
+
+    def _place(self, level, out):
+        """Status bits and volume into out, of a level on another line of the table than the last."""
+        xs = self.table.levels_m
+        if level <= self.height_m:
+            level = self.height_m
+            out[0] |= 16
+        if level < xs[0]:
+            out[0] |= 32
+        elif level > xs[-1]:
+            out[0] |= 64
+        out[3] = self.table.volume(level)
+        self._piece[0] = max(self._piece[0], self.height_m)
+        return level
+
+    def warm(self, t_c):
+        """Take the liquid's weight [N/m3] at a temperature [degC] for the figures that follow."""
+        self._warmth = t_c
+        density, salinity, gravity = self._filling
+        weight = gravity * density(t_c, salinity, 0)
+        self._weight = weight, (gravity * density(t_c, salinity, 1e6) - weight) * 0.5e-6
+
+    def level(self, p, barometer_pa, p_top=None):
+        """Level [m above tank datum] from pressures [Pa] over the reference; at height_m or below it the tank is dry."""
+        weight, more = self._weight
+        weight = weight + more * p
+        if p_top is None:
+            air, rise = self._air
+            air = air * barometer_pa
+            return self.height_m + (p + air * rise) / (weight - air)
+        return self.height_m + (p - p_top) / (weight + more * p_top)
+
+    def top(self, p, p_top):
+        """Head [m] that a headspace's gauge pressure [Pa] adds to the hydraulic grade."""
+        weight, more = self._weight
+        return p_top / (weight + more * (p + p_top))
