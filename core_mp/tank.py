@@ -31,11 +31,12 @@ class Tank:
         self.t_c = t_c
         self.standard_pa = standard_pa
         low, high = transmitter.clear if transmitter.straight else (1, 0)
-        self._quick = (low, high) + transmitter.line
+        self._quick = (low, high, inside) + transmitter.line
         self._piece = table.piece
-        self._filling = density, salinity, gravity
+        self.filling = density, salinity, gravity
         self._air = air_per_pa * gravity, rise_m
         self._warmth = None
+        self.weight = [0.0, 0.0]
 
     def measure(self, raw, temperature_c=None, barometer_pa=None, headspace_pa=None, out=None):
         """One reading's figures: [status bits, pressure_pa, level_m, volume_m3, grade_m], in out where it is given.
@@ -46,7 +47,7 @@ class Tank:
         """
         if out is None:
             out = [0] * 5
-        low, high, x, p, slope = self._quick
+        low, high, inside, x, p, slope = self._quick
         out[0] = 0
         if low <= raw <= high:
             p += (raw - x) * slope
@@ -63,10 +64,10 @@ class Tank:
             self.warm(temperature_c)
         if barometer_pa is None or not 30e3 <= barometer_pa <= 120e3:
             barometer_pa = self.standard_pa
-            if self.inside is not None:
+            if inside is not None:
                 out[0] |= 256
-        if self.inside is not None:
-            p += self.inside - barometer_pa
+        if inside is not None:
+            p += inside - barometer_pa
         raw = self.level(p, barometer_pa, headspace_pa)
         low, high, x, y, slope = self._piece
         if low < raw < high:
@@ -96,21 +97,24 @@ class Tank:
     def warm(self, t_c):
         """Take the liquid's weight [N/m3] at a temperature [degC] for the figures that follow."""
         self._warmth = t_c
-        density, salinity, gravity = self._filling
-        weight = gravity * density(t_c, salinity, 0)
-        self._weight = weight, (gravity * density(t_c, salinity, 1e6) - weight) * 0.5e-6
+        density, salinity, gravity = self.filling
+        self.weight[0] = gravity * density(t_c, salinity, 0)
+        self.weight[1] = (gravity * density(t_c, salinity, 1e6) - self.weight[0]) * 0.5e-6
 
     def level(self, p, barometer_pa, p_top=None):
         """Level [m above tank datum] from pressures [Pa] over the reference; at height_m or below it the tank is dry."""
-        weight, more = self._weight
+        weight, more = self.weight
         weight = weight + more * p
         if p_top is None:
             air, rise = self._air
             air = air * barometer_pa
-            return self.height_m + (p + air * rise) / (weight - air)
-        return self.height_m + (p - p_top) / (weight + more * p_top)
+            p = (p + air * rise) / (weight - air)
+        else:
+            weight = weight + more * p_top
+            p = (p - p_top) / weight
+        return p + self.height_m
 
     def top(self, p, p_top):
         """Head [m] that a headspace's gauge pressure [Pa] adds to the hydraulic grade."""
-        weight, more = self._weight
+        weight, more = self.weight
         return p_top / (weight + more * (p + p_top))

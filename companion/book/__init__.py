@@ -1,0 +1,1 @@
+"""Where raw readings lie: what a reading is, its CSV, the SQLite store."""

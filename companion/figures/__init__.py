@@ -1,0 +1,1 @@
+"""Raw readings to figures: level, volume, hydraulic grade and their uncertainty."""

@@ -1,0 +1,1 @@
+"""What people hand in: the daily log, the trend."""
