@@ -9,7 +9,7 @@ import argparse
 import re
 import sys
 from collections.abc import Callable, Sequence
-from datetime import date, datetime, timedelta, timezone
+from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -80,21 +80,37 @@ def _parser() -> argparse.ArgumentParser:
 
     sub = add("demo", _demo, "everything on this machine: broker, simulated tanks, book, daily log", "--for 20 --out demo-book")
     sub.add_argument("--for", dest="seconds", type=float, metavar="SECONDS", help="end by itself after so long")
-    sub.add_argument("--out", type=Path, default=Path("demo-book"), metavar="DIR", help="folder for its files (default: demo-book)")
+    sub.add_argument(
+        "--out", type=Path, default=Path("demo-book"), metavar="DIR", help="folder for its files (default: demo-book)"
+    )
     site(add("check", _check, "read the site file and its tables; say all that is wrong", "site.toml"))
     sub = tank(add("convert", _convert, "raw readings to figures", "site.toml north readings.csv -o figures.csv"))
     sub.add_argument("readings", metavar="READINGS.csv", help="a CSV of raw readings; - reads standard input")
     output(sub, "CSV of figures (default: standard output)")
     sub = tank(add("load", _load, "put a file of raw readings in the book", "site.toml north readings.csv"))
     sub.add_argument("readings", metavar="READINGS.csv", help="a CSV of raw readings; - reads standard input")
-    sub = tank(add("export", _export, "raw readings out of the book again", "site.toml north --from 2026-03-01 --to 2026-03-31 -o r.csv"))
+    sub = tank(
+        add(
+            "export",
+            _export,
+            "raw readings out of the book again",
+            "site.toml north --from 2026-03-01 --to 2026-03-31 -o r.csv",
+        )
+    )
     span(sub, "T")
     output(sub, "CSV of readings (default: standard output)")
     sub = site(add("daily", _daily, "the daily volume log", "site.toml --from 2026-03-01 --to 2026-03-31 -o march.csv"))
     span(sub, "D")
     sub.add_argument("--tank", metavar="T", action="append", help="only this tank; may be given again")
     output(sub, "CSV, one row a tank and day (default: standard output)")
-    sub = tank(add("trend", _trend, "level, volume and grade against time", "site.toml north --from 2026-03-01 --to 2026-03-07 -o week.png"))
+    sub = tank(
+        add(
+            "trend",
+            _trend,
+            "level, volume and grade against time",
+            "site.toml north --from 2026-03-01 --to 2026-03-07 -o week.png",
+        )
+    )
     span(sub, "T")
     output(sub, "picture: .png, .svg or .pdf", None)
     site(add("listen", _listen, "readings from MQTT into the book, until stopped", "site.toml"))
@@ -145,10 +161,14 @@ def _load(args: argparse.Namespace) -> int:
     status = _told(args, rejects, len(frame), "read")
     if len(added.conflicts):
         clash = Rejects(rejects.source)
-        clash.rows = [(0, "the book has another reading of this identity", ",".join(map(str, row))) for row in added.conflicts.to_numpy()]
+        clash.rows = [
+            (0, "the book has another reading of this identity", ",".join(map(str, row))) for row in added.conflicts.to_numpy()
+        ]
         path = _beside(args.readings, "conflicts")
         clash.write(path)
-        status = _said(f"{rejects.source}: {len(clash.rows)} readings differ from what the book has of them; they are in {path}", 1)
+        status = _said(
+            f"{rejects.source}: {len(clash.rows)} readings differ from what the book has of them; they are in {path}", 1
+        )
     return status
 
 
@@ -233,7 +253,9 @@ def _told(args: argparse.Namespace, rejects: Rejects, taken: int, done: str) -> 
     path = _beside(args.readings, "rejects")
     rejects.write(path)
     line, reason, _ = rejects.rows[0]
-    return _said(f"{rejects.source}: {taken} rows {done}, {len(rejects.rows)} rejected to {path}; the first: line {line}: {reason}", 1)
+    return _said(
+        f"{rejects.source}: {taken} rows {done}, {len(rejects.rows)} rejected to {path}; the first: line {line}: {reason}", 1
+    )
 
 
 def _beside(readings: str, word: str) -> Path:
@@ -259,7 +281,7 @@ def _moment(site: Site, text: str, option: str) -> datetime:
         raise WrongUse(f"{option} {text}: write a day like 2026-03-01 or a moment like 2026-03-01T06:00:00Z") from None
     if moment.tzinfo is None:
         raise WrongUse(f"{option} {text}: has no zone; write {text}Z for UTC, or with an offset like +02:00")
-    return moment.astimezone(timezone.utc)
+    return moment.astimezone(UTC)
 
 
 def _day(text: str, option: str) -> date:

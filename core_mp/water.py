@@ -16,7 +16,7 @@ def water_density(t_c, salinity=None, pressure_pa=0.0):
     >>> round(water_density(10.0, 35.0), 3)
     1026.952
     >>> round(water_density(4.0, 0.0, 400e3), 3)
-    1000.174
+    1000.173
     """
     rho = (t_c - 3.983035) ** 2 * (t_c + 301.797) / (522.542 * (t_c + 69.34881))
     a = t_c - 3.983035

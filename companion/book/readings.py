@@ -76,7 +76,9 @@ def empty_frame() -> pd.DataFrame:
     return frame_of([], [], life=[], seq=[])
 
 
-def read_csv(source: str | Path, signal: str = "counts", limits: tuple[float, float] | None = None) -> tuple[pd.DataFrame, Rejects]:
+def read_csv(
+    source: str | Path, signal: str = "counts", limits: tuple[float, float] | None = None
+) -> tuple[pd.DataFrame, Rejects]:
     """Readings from a CSV file ("-": standard input), sorted by time, and the rows that were rejected.
 
     signal: what raw is (counts, current, voltage, pressure, level); raw is in SI (A, V, Pa, m) unless the header names the
@@ -131,7 +133,9 @@ def _header(text: str, name: str, signal: str) -> tuple[list[str], float]:
         if unit:
             units = RAW_UNITS[signal]
             if unit[1] not in units:
-                raise FileFault(f"{name}: line 1: raw in '{unit[1]}', but the sensor sends {signal}; write one of {', '.join(units)}")
+                raise FileFault(
+                    f"{name}: line 1: raw in '{unit[1]}', but the sensor sends {signal}; write one of {', '.join(units)}"
+                )
             factor = units[unit[1]]
             fields.append("raw")
         elif heading in ("time", "raw", "life", "seq"):
@@ -156,7 +160,7 @@ def _header(text: str, name: str, signal: str) -> tuple[list[str], float]:
 def _quickly(text: str, fields: list[str], factor: float, signal: str,
              limits: tuple[float, float] | None) -> pd.DataFrame | None:  # fmt: skip
     """The readings of a file in which nothing is amiss; None where something is, which _carefully then tells."""
-    kinds: dict[str, Any] = {name: np.float64 for name in fields}
+    kinds: dict[str, Any] = dict.fromkeys(fields, np.float64)
     kinds |= {name: kind for name, kind in (("time", str), ("life", str), ("seq", np.int64)) if name in fields}
     try:
         table = pd.read_csv(io.StringIO(text), names=fields, header=0, dtype=kinds, skip_blank_lines=False, index_col=False,
@@ -222,7 +226,9 @@ def _carefully(text: str, name: str, fields: list[str], factor: float, signal: s
     return frame_of(list(times), list(raw), life=list(life), seq=list(seq), **columns), rejects
 
 
-def _row(cells: list[str], fields: list[str], factor: float, signal: str, limits: tuple[float, float] | None) -> tuple[Any, ...]:
+def _row(
+    cells: list[str], fields: list[str], factor: float, signal: str, limits: tuple[float, float] | None
+) -> tuple[Any, ...]:
     if len(cells) != len(fields):
         raise ValueError(f"{len(cells)} values, but the header names {len(fields)}")
     found = dict(zip(fields, (cell.strip() for cell in cells), strict=True))
@@ -247,7 +253,9 @@ def _row(cells: list[str], fields: list[str], factor: float, signal: str, limits
 
 def _time(text: str) -> pd.Timestamp:
     if _NO_ZONE.fullmatch(text):
-        raise ValueError(f"time '{text}' has no zone; write it as {text.replace(' ', 'T')[:19]}Z for UTC, or with an offset like +02:00")
+        raise ValueError(
+            f"time '{text}' has no zone; write it as {text.replace(' ', 'T')[:19]}Z for UTC, or with an offset like +02:00"
+        )
     if not _RFC3339.fullmatch(text):
         raise ValueError(f"time '{text}' is not RFC 3339; write it like 2026-01-31T23:59:00Z")
     try:

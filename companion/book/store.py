@@ -10,7 +10,7 @@ from __future__ import annotations
 import sqlite3
 from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import datetime, timedelta, timezone
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from types import TracebackType
 
@@ -20,7 +20,7 @@ import pandas as pd
 from companion.book.readings import COLUMNS, empty_frame, frame_of
 
 VERSION = 1
-EPOCH = datetime(1970, 1, 1, tzinfo=timezone.utc)
+EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 CONTENT = ("time_us", "raw", "temperature_c", "barometer_pa", "headspace_pa", "battery_v")
 
 SCHEMA = """
@@ -91,7 +91,9 @@ class Book:
                 self._db.execute("COMMIT")
         version = self._db.execute("PRAGMA user_version").fetchone()[0]
         if version != VERSION:
-            raise BookError(f"{self.path}: a book of version {version}, this levelbook reads version {VERSION}; upgrade levelbook")
+            raise BookError(
+                f"{self.path}: a book of version {version}, this levelbook reads version {VERSION}; upgrade levelbook"
+            )
         self._db.execute(INCOMING)
 
     def add(self, tank: str, frame: pd.DataFrame) -> Added:
@@ -116,8 +118,10 @@ class Book:
         columns += [_nullable(frame[name]) for name in COLUMNS[1:6]]
         db, where = self._db, self._id(tank)
         db.execute("DELETE FROM temp.incoming")
-        db.executemany("INSERT INTO temp.incoming VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)", zip(*columns, range(len(frame)), strict=True))
-        arrived = (datetime.now(timezone.utc) - EPOCH) // timedelta(microseconds=1)
+        db.executemany(
+            "INSERT INTO temp.incoming VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)", zip(*columns, range(len(frame)), strict=True)
+        )
+        arrived = (datetime.now(UTC) - EPOCH) // timedelta(microseconds=1)
         new = db.execute(
             "INSERT OR IGNORE INTO reading SELECT ?, life, seq, time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, ?"
             " FROM temp.incoming ORDER BY row", (where, arrived)).rowcount  # fmt: skip
@@ -141,7 +145,9 @@ class Book:
 
     def last(self, tank: str) -> pd.DataFrame:
         """The tank's latest reading, as a frame of one row; of none where there is none."""
-        row = self._db.execute("SELECT max(time_us) FROM reading WHERE tank = (SELECT id FROM name WHERE word = ?)", (tank,)).fetchone()
+        row = self._db.execute(
+            "SELECT max(time_us) FROM reading WHERE tank = (SELECT id FROM name WHERE word = ?)", (tank,)
+        ).fetchone()
         if row[0] is None:
             return empty_frame()
         return self.readings(tank, EPOCH + timedelta(microseconds=row[0])).tail(1).reset_index(drop=True)
@@ -162,11 +168,15 @@ class Book:
             return None
         seq = self._whole.get(key)
         if seq is None or (oldest is not None and oldest - 1 > seq):
-            low = self._db.execute("SELECT min(seq) FROM reading WHERE tank = ? AND life = ? AND seq >= ?", (*ids, oldest or 0)).fetchone()[0]
+            low = self._db.execute(
+                "SELECT min(seq) FROM reading WHERE tank = ? AND life = ? AND seq >= ?", (*ids, oldest or 0)
+            ).fetchone()[0]
             if low is None or (oldest is not None and low > oldest):
                 return seq
             seq = low
-        for (stored,) in self._db.execute("SELECT seq FROM reading WHERE tank = ? AND life = ? AND seq > ? ORDER BY seq", (*ids, seq)):
+        for (stored,) in self._db.execute(
+            "SELECT seq FROM reading WHERE tank = ? AND life = ? AND seq > ? ORDER BY seq", (*ids, seq)
+        ):
             if stored != seq + 1:
                 break
             seq = stored
@@ -176,7 +186,9 @@ class Book:
     def _id(self, word: str) -> int:
         known = self._known(word)
         if known is None:
-            known = self._ids[word] = int(self._db.execute("INSERT INTO name (word) VALUES (?) RETURNING id", (word,)).fetchone()[0])
+            known = self._ids[word] = int(
+                self._db.execute("INSERT INTO name (word) VALUES (?) RETURNING id", (word,)).fetchone()[0]
+            )
         return known
 
     def _known(self, word: str) -> int | None:

@@ -45,12 +45,14 @@ def convert(tank: TankSettings, readings: pd.DataFrame, doubts: bool = True) -> 
         for start in range(0, len(raw), CHUNK):
             at = slice(start, start + CHUNK)
             chunk = {name: column[at] for name, column in part.items()}
-            _figures(tank, period, core, raw[at], temperature[at], barometer[at], headspace[at] if closed else None, flags[at], chunk)
+            _figures(
+                tank, period, core, raw[at], temperature[at], barometer[at], headspace[at] if closed else None, flags[at], chunk
+            )
         if not isinstance(rows, slice):
             status[rows] = flags
             for name, column in out.items():
                 column[rows] = part[name]
-    return pd.DataFrame({"time": readings["time"].to_numpy(), "status": status, **out}).assign(time=readings["time"].array)
+    return pd.DataFrame({"time": readings["time"].array, "status": status, **out}, copy=False)
 
 
 def _by_period(tank: TankSettings, times: pd.Series) -> Iterator[tuple[Period, slice | npt.NDArray[np.intp]]]:
@@ -111,7 +113,9 @@ def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temper
             column[fault] = np.nan
 
 
-def _believed(column: Column, low: float, high: float, otherwise: float, status: npt.NDArray[np.int64], bit: int) -> Column | float:
+def _believed(
+    column: Column, low: float, high: float, otherwise: float, status: npt.NDArray[np.int64], bit: int
+) -> Column | float:
     """The column where its numbers are possible, the other value elsewhere, with the status bit set there."""
     if low <= column.min() and column.max() <= high:
         return column

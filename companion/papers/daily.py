@@ -11,7 +11,7 @@ from __future__ import annotations
 import csv
 from collections.abc import Callable
 from dataclasses import dataclass
-from datetime import date, datetime, time, timedelta, timezone
+from datetime import UTC, date, datetime, time, timedelta
 from pathlib import Path
 from zoneinfo import ZoneInfo
 
@@ -82,7 +82,7 @@ def daily(site: Site, tank: TankSettings, readings: pd.DataFrame, first_day: dat
 
 def local_midnight(day: date, zone: ZoneInfo) -> datetime:
     """The moment [UTC] at which a local day begins; where clocks skip midnight, the first moment that exists."""
-    return datetime.combine(day, time.min, zone).astimezone(timezone.utc)
+    return datetime.combine(day, time.min, zone).astimezone(UTC)
 
 
 def track_of(figures: pd.DataFrame) -> Track:
@@ -105,16 +105,22 @@ def _midnight(track: Track, at_s: float) -> Midnight:
         if not near:
             return Midnight(np.nan, np.nan, np.nan, "no readings on one side of midnight")
         n = near[0]
-        return Midnight(track.level_m[n], track.volume_m3[n], track.volume_u95_m3[n], "taken from the reading nearest to midnight")
+        return Midnight(
+            track.level_m[n], track.volume_m3[n], track.volume_u95_m3[n], "taken from the reading nearest to midnight"
+        )
     span = track.time_s[after] - track.time_s[before]
     if span > BRIDGE.total_seconds():
         return Midnight(np.nan, np.nan, np.nan, f"no readings for {spoken(span)} over midnight")
     part = (at_s - track.time_s[before]) / span if span else 0.0
-    level, volume, doubt = (float(c[before] + part * (c[after] - c[before])) for c in (track.level_m, track.volume_m3, track.volume_u95_m3))
+    level, volume, doubt = (
+        float(c[before] + part * (c[after] - c[before])) for c in (track.level_m, track.volume_m3, track.volume_u95_m3)
+    )
     if span <= GAP * track.interval_s:
         return Midnight(level, volume, doubt)
     away = min(at_s - track.time_s[before], track.time_s[after] - at_s)
-    return Midnight(level, volume, float(np.hypot(doubt, away * _fastest(track, at_s))), f"interpolated over a gap of {spoken(span)}")
+    return Midnight(
+        level, volume, float(np.hypot(doubt, away * _fastest(track, at_s))), f"interpolated over a gap of {spoken(span)}"
+    )
 
 
 def _fastest(track: Track, at_s: float) -> float:

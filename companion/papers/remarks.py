@@ -66,7 +66,9 @@ def spoken(seconds: float) -> str:
 def _told_gaps(gaps: list[tuple[float, float]], zone: ZoneInfo, bounds: list[datetime]) -> list[str]:
     long = sorted((gap for gap in gaps if gap[1] - gap[0] >= LONG), key=lambda gap: gap[0] - gap[1])
     end = bounds[1].timestamp()
-    said = [f"no level {_at(a, zone)}-{'24:00' if b >= end else _at(b, zone)} ({spoken(b - a)})" for a, b in sorted(long[:NAMED])]
+    said = [
+        f"no level {_at(a, zone)}-{'24:00' if b >= end else _at(b, zone)} ({spoken(b - a)})" for a, b in sorted(long[:NAMED])
+    ]
     rest = long[NAMED:] + [gap for gap in gaps if gap[1] - gap[0] < LONG]
     if rest:
         plural = "s" if len(rest) > 1 else ""

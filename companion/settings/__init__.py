@@ -1,0 +1,1 @@
+"""What people tell us: the site file, read, checked and dated, in SI."""
