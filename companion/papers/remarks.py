@@ -54,10 +54,12 @@ def remarks(tank: TankSettings, zone: ZoneInfo, figures: pd.DataFrame, gaps: lis
 def spoken(seconds: float) -> str:
     """A length of time as people say it.
 
-    >>> spoken(11100.0), spoken(40.0)
-    ('3 h 05 min', '40 s')
+    >>> spoken(11100.0), spoken(40.0), spoken(1.2e6)
+    ('3 h 05 min', '40 s', '13 d 21 h')
     """
-    minutes = round(seconds / 60.0)
+    minutes, hours = round(seconds / 60.0), round(seconds / 3600.0)
+    if hours >= 48:
+        return f"{hours // 24} d {hours % 24} h"
     if seconds < 120.0:
         return f"{seconds:.0f} s"
     return f"{minutes} min" if minutes < 60 else f"{minutes // 60} h {minutes % 60:02d} min"
