@@ -34,7 +34,7 @@ class Tank:
         self._quick = (low, high, inside) + transmitter.line
         self._piece = table.piece
         self.filling = density, salinity, gravity
-        self._air = air_per_pa * gravity, rise_m
+        self.air = air_per_pa * gravity, rise_m
         self._warmth = None
         self.weight = [0.0, 0.0]
 
@@ -106,7 +106,7 @@ class Tank:
         weight, more = self.weight
         weight = weight + more * p
         if p_top is None:
-            air, rise = self._air
+            air, rise = self.air
             air = air * barometer_pa
             p = (p + air * rise) / (weight - air)
         else:

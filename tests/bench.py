@@ -87,7 +87,7 @@ def bench_columns(tank, n: int = 10_000_000) -> None:
     raw, t, b = (frame[name].to_numpy(float) for name in ("raw", "temperature_c", "barometer_pa"))
     period = tank.periods()[0]
     core, xs, ys = tank.core(period), period.strapping.levels_m, period.strapping.volumes_m3
-    (air, rise), g, span = core._air, core.filling[2], 1e5 / (32767 - 6553)
+    (air, rise), g, span = core.air, core.filling[2], 1e5 / (32767 - 6553)
 
     def expression(raw: np.ndarray, t: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, ...]:
         p = (raw - 6553) * span

@@ -1,0 +1,1 @@
+"""From outside into the book: the wire's packs, MQTT."""

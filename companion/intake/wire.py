@@ -1,0 +1,178 @@
+"""The wire: a topic and a SenML pack (RFC 8428, JSON) to readings.
+
+    pack = decode("levelbook/north/readings", payload, signal_of)
+
+signal_of gives a tank's raw signal (counts, current, voltage, pressure, level), None for a tank it does not know. A pack
+that is no SenML, or is of another tank than its topic, raises WireError; of a pack with good and bad readings the good
+ones are taken and the bad ones told in faults.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+import re
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+import pandas as pd
+
+from companion.book.readings import COLUMNS, frame_of
+
+TOPIC = re.compile(r"levelbook/([a-z0-9_-]+)/readings")
+NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9\-:./_]*")  # RFC 8428, 4.5.1
+RELATIVE = 2**28  # s: resolved times below are relative to now, RFC 8428, 4.5.3
+VERSION = 10  # of SenML, RFC 8428, 4.4
+UNITS = {"counts": None, "current": "A", "voltage": "V", "pressure": "Pa", "level": "m", "temperature": "Cel",
+         "barometer": "Pa", "headspace": "Pa", "battery": "V", "seq": None}  # fmt: skip
+PLACES = {"temperature": "temperature_c", "barometer": "barometer_pa", "headspace": "headspace_pa", "battery": "battery_v"}
+SIGNALS = ("counts", "current", "voltage", "pressure", "level")
+NO_LIFE = "wire"  # of a logger that says neither life nor seq: its seq is the time in microseconds
+VALUES = ("v", "vs", "vb", "vd")
+
+
+class WireError(ValueError):
+    """A payload that cannot be taken as a whole; the message says why."""
+
+
+@dataclass(frozen=True)
+class Record:
+    """A resolved SenML record (RFC 8428, 4.6): full name, time [s since 1970, or since now when relative], unit, value."""
+
+    name: str
+    time: float
+    unit: str | None
+    value: Any
+
+
+@dataclass(frozen=True)
+class Pack:
+    """A tank's readings from the wire. life as it came (text or number), None where none; oldest: seq the spool still holds."""
+
+    tank: str
+    frame: pd.DataFrame
+    life: str | int | None
+    oldest: int | None
+    faults: list[str]
+
+
+def decode(topic: str, payload: bytes, signal_of: Callable[[str], str | None], now: float | None = None) -> Pack:
+    """The readings of a pack. now: time of arrival [s since 1970], the clock's where not given. WireError."""
+    match = TOPIC.fullmatch(topic)
+    if match is None:
+        raise WireError(f"topic '{topic[:80]}' is not levelbook/<tank>/readings")
+    tank = match[1]
+    signal = signal_of(tank)
+    if signal is None:
+        raise WireError(f"there is no tank '{tank}' in the site file")
+    records = resolve(payload)
+    strange = next((record.name for record in records if not record.name.startswith(f"{tank}/")), None)
+    if strange is not None:
+        raise WireError(f"'{strange[:80]}' is not of tank '{tank}', whose topic it came on")
+    arrived = time.time() if now is None else now
+    life = next((record.value for record in reversed(records) if record.name == f"{tank}/life"), None)
+    if life is not None and (isinstance(life, (bool, float)) or not isinstance(life, (str, int)) or life == ""):
+        raise WireError(f"life {life!r} is neither text nor a whole number")
+    oldest = next((record.value for record in reversed(records) if record.name == f"{tank}/oldest"), None)
+    rows, faults = [], []
+    for group in _readings(records, len(tank) + 1):
+        try:
+            rows.append(_row(group, signal, NO_LIFE if life is None else str(life), arrived))
+        except ValueError as fault:
+            faults.append(str(fault))
+    return Pack(tank, _frame(rows), life, _whole(oldest), faults)
+
+
+def resolve(payload: bytes) -> list[Record]:
+    """The records of a SenML pack with base fields applied (RFC 8428, 4.6). WireError where it is none."""
+    try:
+        items = json.loads(payload.decode("utf-8"), parse_constant=_constant)
+    except (UnicodeDecodeError, ValueError, RecursionError) as error:
+        raise WireError(f"is no JSON: {str(error)[:80]}") from None
+    if not isinstance(items, list) or not items or not all(isinstance(item, dict) for item in items):
+        raise WireError("is no SenML pack: a list of one or more records")
+    base: dict[str, Any] = {"bn": "", "bt": 0, "bu": None, "bv": None, "bver": VERSION}
+    records = []
+    for n, item in enumerate(items, 1):
+        for label in item:
+            if label.endswith("_"):
+                raise WireError(f"record {n}: '{label[:40]}' must be understood and is not (RFC 8428, 4.4)")
+        base |= {label: _checked(n, label, item[label]) for label in base if label in item}
+        if base["bver"] > VERSION:
+            raise WireError(f"record {n}: SenML version {base['bver']}, known are those up to {VERSION}")
+        name = base["bn"] + _checked(n, "n", item.get("n", ""))
+        told = [label for label in VALUES if label in item]
+        if not told and "s" not in item and base["bv"] is None:
+            continue  # a record of base fields alone
+        if NAME.fullmatch(name) is None:
+            raise WireError(f"record {n}: '{name[:80]}' is no SenML name")
+        if len(told) > 1:
+            raise WireError(f"record {n}: has more than one value ({', '.join(told)})")
+        value = item[told[0]] if told else None
+        if told == ["v"] or (not told and base["bv"] is not None):
+            value = _checked(n, "v", item.get("v", 0)) + (base["bv"] or 0)
+        at = base["bt"] + _checked(n, "t", item.get("t", 0))
+        records.append(Record(name, at, item.get("u", base["bu"]), value))
+    return records
+
+
+def _checked(n: int, label: str, value: Any) -> Any:
+    """The value of a label, of the type that RFC 8428, 4.3 gives it."""
+    texts = label in ("bn", "bu", "n", "u")
+    good = isinstance(value, str) if texts else isinstance(value, (int, float)) and not isinstance(value, bool)
+    if not good or (not texts and not math.isfinite(value)):
+        raise WireError(f"record {n}: {label} {str(value)[:40]!r} is no {'text' if texts else 'number'}")
+    return value
+
+
+def _constant(word: str) -> float:
+    raise ValueError(f"{word} is no number in JSON")
+
+
+def _readings(records: list[Record], prefix: int) -> list[dict[str, Record]]:
+    """Records of one reading together: those of one time, until a name comes again."""
+    groups: list[dict[str, Record]] = []
+    for record in records:
+        name = record.name[prefix:]
+        if name in ("life", "oldest"):
+            continue
+        if not groups or name in groups[-1] or next(iter(groups[-1].values())).time != record.time:
+            groups.append({})
+        groups[-1][name] = record
+    return groups
+
+
+def _row(group: dict[str, Record], signal: str, life: str, arrived: float) -> dict[str, Any]:
+    when = next(iter(group.values())).time
+    when = when if when >= RELATIVE else arrived + when
+    told = f"reading of {when:.0f}"
+    for name, record in group.items():
+        if name not in UNITS:
+            raise ValueError(f"{told}: '{name[:40]}' is no name known here; known are {', '.join(UNITS)}")
+        if record.unit != UNITS[name] and not (record.unit is None and name not in PLACES):
+            raise ValueError(f"{told}: {name} in {record.unit!r}, wanted is {UNITS[name]!r}")
+        if isinstance(record.value, bool) or not isinstance(record.value, (int, float)):
+            raise ValueError(f"{told}: {name} is no number")
+    if signal not in group:
+        sent = [name for name in SIGNALS if name in group]
+        raise ValueError(f"{told}: sends {sent[0] if sent else 'no raw signal'}, the site file says {signal}")
+    if not 946684800.0 <= when <= 4102444800.0:
+        raise ValueError(f"{told}: the time is before 2000 or after 2100")
+    microseconds = round(when * 1e6)
+    seq = _whole(group["seq"].value) if "seq" in group else microseconds
+    if seq is None:
+        raise ValueError(f"{told}: seq {group['seq'].value!r} is no whole number from 0 up")
+    row = {"time": microseconds, "raw": float(group[signal].value), "life": life, "seq": seq}
+    return row | {column: float(group[name].value) if name in group else math.nan for name, column in PLACES.items()}
+
+
+def _whole(value: Any) -> int | None:
+    good = isinstance(value, (int, float)) and not isinstance(value, bool) and value == int(value) and 0 <= value < 2**63
+    return int(value) if good else None
+
+
+def _frame(rows: list[dict[str, Any]]) -> pd.DataFrame:
+    columns = {name: [row[name] for row in rows] for name in COLUMNS}
+    return frame_of(pd.to_datetime(columns.pop("time"), unit="us", utc=True), columns.pop("raw"), **columns)
