@@ -18,7 +18,7 @@ import paho.mqtt.client as mqtt
 import pandas as pd
 from paho.mqtt.enums import CallbackAPIVersion
 
-from companion.book.readings import write_readings
+from companion.book.readings import COLUMNS, write_readings
 from companion.book.store import Book, open_book
 from companion.field.broker import local_broker
 from companion.field.district import LIVES, write_district
@@ -79,10 +79,10 @@ class Logger:
         """Spool the readings up to a simulated time, and publish those that have no receipt yet."""
         due = self.coming[self.coming["time"] <= until]
         self.coming = self.coming.iloc[len(due) :]
-        for row in due.itertuples(index=False):
-            others = [None if np.isnan(value) else value for value in row[2:6]]
-            raw = int(row.raw) if self.signal == "counts" else row.raw
-            self.spool.append((int(row.seq), int(row.time.timestamp()), raw, *others))
+        for row in due.to_dict("records"):
+            others = [None if np.isnan(row[name]) else row[name] for name in COLUMNS[2:6]]
+            raw = int(row["raw"]) if self.signal == "counts" else row["raw"]
+            self.spool.append((row["seq"], int(row["time"].timestamp()), raw, *others))
         if self.spool:
             pack = senml.pack(self.tank, self.signal, "sim", self.spool[0][0], self.spool[:60])
             self.client.publish(f"levelbook/{self.tank}/readings", pack, qos=1)

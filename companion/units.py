@@ -67,7 +67,7 @@ def read(text: object, dimension: str) -> float:
     >>> read("1 bar", "pressure"), read("50 degF", "temperature"), read("0.1 %", "share")
     (100000.0, 10.0, 0.001)
     """
-    si, proposed = DIMENSIONS[dimension]
+    proposed = DIMENSIONS[dimension][1]
     if isinstance(text, bool) or not isinstance(text, (str, int, float)):
         raise QuantityError(f'{text!r} is no {dimension}; write it like "1.5 {proposed}"')
     match = _NUMBER.fullmatch(text if isinstance(text, str) else repr(text))
@@ -111,12 +111,12 @@ def _spelt(unit: str) -> str:
     return f"1 {unit}" if unit.startswith("/") else unit
 
 
-def _quantity(unit: str, number: float) -> pint.Quantity[Any] | None:
+def _quantity(unit: str, number: float) -> Any:
     registry = _registry()
     try:
         if unit in ("degC", "degF", "K", "kelvin", "degR"):
             return registry.Quantity(number, unit)
-        return number * registry.parse_expression(unit)
+        return registry.Quantity(number) * registry.parse_expression(unit)
     except Exception:  # pint has many ways to say that it does not know a unit, tokenizer errors among them
         return None
 

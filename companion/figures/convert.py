@@ -91,7 +91,7 @@ def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temper
             status |= np.isnan(headspace) * bits.NO_READING
         density, salinity, gravity = core.filling
         weight = gravity * density(t, salinity, 0.5 * (p if headspace is None else p + headspace))
-        core.weight = (weight, 0.0)
+        core.weight = [weight, 0.0]  # type: ignore[list-item]  # a column where a logger has a number
         level = core.level(p, air, headspace)
         top = 0.0 if headspace is None else core.top(p, headspace)
         if not level.min() > core.height_m:

@@ -195,7 +195,7 @@ class Listener:
 
     def on_message(self, client: mqtt.Client, userdata: Any, message: mqtt.MQTTMessage) -> None:
         """paho's: a message. Waits where the queue is full."""
-        self._queue.put(Message(self._connection, message.mid, message.qos, message.topic, message.payload))
+        self._queue.put(Message(self._connection, message.mid, message.qos, message.topic, bytes(message.payload)))
 
 
 def _client(site: Site, listener: Listener) -> mqtt.Client:

@@ -91,8 +91,8 @@ def track_of(figures: pd.DataFrame) -> Track:
     time_s = pd.DatetimeIndex(good["time"]).as_unit("us").asi8 / 1e6
     steps = np.diff(pd.DatetimeIndex(figures["time"]).as_unit("us").asi8 / 1e6)
     steps = steps[steps > 0]
-    names = ("level_m", "volume_m3", "volume_u95_m3")
-    return Track(time_s, *(good[name].to_numpy(float) for name in names), float(np.median(steps)) if len(steps) else np.nan)
+    level, volume, doubt = (good[name].to_numpy(float) for name in ("level_m", "volume_m3", "volume_u95_m3"))
+    return Track(time_s, level, volume, doubt, float(np.median(steps)) if len(steps) else np.nan)
 
 
 def _midnight(track: Track, at_s: float) -> Midnight:

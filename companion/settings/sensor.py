@@ -50,7 +50,7 @@ class Sensor:
             return 0.0
         transmitter = self.transmitter()
         marks = self.loop or self.scale
-        return max(transmitter.pressure(count + 1) - transmitter.pressure(count) for count, _ in marks[:-1])
+        return max(float(transmitter.pressure(count + 1) - transmitter.pressure(count)) for count, _ in marks[:-1])
 
     def transmitter(self) -> Transmitter:
         """The transmitter as core_mp takes it."""

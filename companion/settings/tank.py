@@ -91,7 +91,8 @@ class TankSettings:
 
     def periods(self) -> list[Period]:
         """Stretches of time with their sensor and table, in order, over all time; what is dated first serves before too."""
-        starts = sorted({at.since for at in (*self.sensors[1:], *self.strappings[1:]) if at.since is not None})
+        dates = [sensor.since for sensor in self.sensors[1:]] + [table.since for table in self.strappings[1:]]
+        starts = sorted({since for since in dates if since is not None})
         edges: list[datetime | None] = [None, *starts, None]
         return [
             Period(start, end, _in_force(self.sensors, start), _in_force(self.strappings, start))

@@ -104,7 +104,7 @@ def test_rows_out_of_order_are_sorted_and_told(file) -> None:
     ],
 )
 def test_a_wrong_header_is_one_clear_error(file, text: str, fault: str) -> None:
-    with pytest.raises(FileFault, match="r.csv: line 1: ") as told:
+    with pytest.raises(FileFault, match=r"r\.csv: line 1: ") as told:
         read_csv(file(text))
     assert fault in str(told.value) and "\n" not in str(told.value)
 
