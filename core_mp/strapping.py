@@ -9,7 +9,7 @@ class StrappingTable:
 
     levels_m [m above tank datum], volumes_m3 [m3]: two rows or more, both rising. Any sequences; array('f') on a board.
     Outside the table the end row serves: nothing is guessed beyond the survey. Linear between rows, as in EPANET.
-    Raises ValueError where rows do not rise.
+    Raises ValueError or IndexError where there are no two rows, or they do not rise.
 
     >>> north = StrappingTable([0.0, 1.0, 2.0], [0.0, 20.0, 42.0])
     >>> north.volume(1.5), north.level(31.0), north.area(1.5), north.volume(9.0)
@@ -20,7 +20,7 @@ class StrappingTable:
         self.levels_m = levels_m
         self.volumes_m3 = volumes_m3
         self.piece = [1, 0, 0, 0, 0]  # the line last stood on: from level, to level, its lower row's level and volume, area
-        for i in range(1, max(len(levels_m), len(volumes_m3))):
+        for i in range(1, max(2, len(levels_m), len(volumes_m3))):
             if not (levels_m[i - 1] < levels_m[i] and volumes_m3[i - 1] < volumes_m3[i]):
                 raise ValueError(i)
 
