@@ -24,7 +24,8 @@ from companion.book.store import open_book
 from companion.figures.convert import convert
 from companion.figures.turning import BAND, averaged, neighbours, noise, turning_points
 from companion.papers.remarks import remarks, spoken
-from companion.settings.site import Site, TankSettings
+from companion.settings.site import Site
+from companion.settings.tank import Period, TankSettings
 
 COLUMNS = ("date", "tank", "opening_level_m", "closing_level_m", "minimum_level_m", "minimum_at", "maximum_level_m", "maximum_at",
            "opening_volume_m3", "closing_volume_m3", "change_m3", "change_u95_m3", "net_fill_m3", "net_draw_m3", "readings",
@@ -163,7 +164,7 @@ def _net(tank: TankSettings, track: Track, part: slice, times: Column, levels: C
     if change_l is None or part.start == part.stop:
         return None, None
     sigma = noise(track.level_m[part])
-    resolution = _resolution(track.level_m[part])
+    resolution = _resolution(tank, times[0], times[-1])
     sigma = max(sigma if np.isfinite(sigma) else 0.0, resolution / np.sqrt(12.0))
     m = neighbours(track.level_m[part], sigma)
     breaks = np.flatnonzero(np.diff(times) > GAP * track.interval_s) + 1
@@ -181,10 +182,15 @@ def _by_level(track: Track, part: slice) -> tuple[Column, Column]:
     return levels, np.maximum.accumulate(track.volume_m3[part][first])
 
 
-def _resolution(levels: Column) -> float:
-    """The smallest step [m] by which readings differ."""
-    steps = np.diff(np.unique(np.round(levels, 7)))
-    return float(steps.min()) if len(steps) else 0.0
+def _resolution(tank: TankSettings, start_s: float, end_s: float) -> float:
+    """What one count of the tank's sensor is worth in level [m]; the largest where the sensor changed in that time."""
+    held = [period for period in tank.periods() if _overlap(period, start_s, end_s)]
+    weight = 9.81 * float(tank.density(tank.default_temperature_c, tank.salinity, 0.0))
+    return max(period.sensor.resolution_pa for period in held) / weight
+
+
+def _overlap(period: Period, start_s: float, end_s: float) -> bool:
+    return (period.start is None or period.start.timestamp() < end_s) and (period.end is None or period.end.timestamp() > start_s)
 
 
 def _extreme(place: Callable[[Column], np.intp], levels: Column) -> int | None:
