@@ -96,7 +96,11 @@ def _cylinder(diameter: float, top: float, level: Column, volume: Column) -> tup
 def readings_of(day: TankDay, kind: str, noise_m: float = 0.0, every_s: int = 60) -> pd.DataFrame:
     """What a 16-bit 4-20 mA sensor at the tank's floor sends: flows are steady within a hydraulic step, so volume is linear there."""
     time = np.arange(0.0, 86400.0 + every_s, every_s)
-    level = np.interp(np.interp(time, day.time_s, day.volume_m3), day.table[1], day.table[0]) if len(day.table[0]) > 2 else np.interp(time, day.time_s, day.level_m)
+    level = (
+        np.interp(np.interp(time, day.time_s, day.volume_m3), day.table[1], day.table[0])
+        if len(day.table[0]) > 2
+        else np.interp(time, day.time_s, day.level_m)
+    )
     level = level + noise_m * np.random.default_rng(11).standard_normal(len(time))
     surface, deep = (IAPWS95(T=WATER_C + 273.15, P=pressure).rho for pressure in (0.101325, 0.501325))
     barometer = 100800.0 + 300.0 * np.sin(time / 86400.0 * 2 * np.pi)
@@ -116,7 +120,9 @@ def readings_of(day: TankDay, kind: str, noise_m: float = 0.0, every_s: int = 60
 def site_with(day: TankDay, kind: str, folder: Path) -> Site:
     """A site file with this tank and sensor."""
     levels, volumes = day.table
-    (folder / "table.csv").write_text("level [m],volume [m^3]\n" + "".join(f"{a!r},{b!r}\n" for a, b in zip(levels.tolist(), volumes.tolist(), strict=True)))
+    (folder / "table.csv").write_text(
+        "level [m],volume [m^3]\n" + "".join(f"{a!r},{b!r}\n" for a, b in zip(levels.tolist(), volumes.tolist(), strict=True))
+    )
     (folder / "site.toml").write_text(f"""
 format = 1
 [site]

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import contextlib
+import importlib.util
+import os
 import shutil
 import socket
 import subprocess
@@ -43,8 +45,11 @@ class Broker:
 
 @contextlib.contextmanager
 def local_broker(port: int = 0, program: str | None = None) -> Iterator[Broker]:
-    """A broker that is gone when the block ends. port: 0 takes a free one. program: "mosquitto" or "iotcore", else whichever is there."""
-    port = port or _free_port()
+    """A broker that is gone when the block ends. port: 0 takes a free one. program: "mosquitto" or "iotcore", else whichever is there.
+
+    The environment variable LEVELBOOK_BROKER names the program where the caller does not.
+    """
+    port, program = port or _free_port(), program or os.environ.get("LEVELBOOK_BROKER")
     with tempfile.TemporaryDirectory(prefix="levelbook-broker-") as folder:
         name, command = _command(program, port, Path(folder))
         child = subprocess.Popen(
@@ -68,16 +73,12 @@ def _command(program: str | None, port: int, folder: Path) -> tuple[str, list[st
         configuration = folder / "mosquitto.conf"
         configuration.write_text(CONFIGURATION.format(port=port, folder=folder) + ("user root\n" if _is_root() else ""))
         return "mosquitto", [mosquitto, "-c", str(configuration)]
-    import importlib.util
-
     if importlib.util.find_spec("iotcore") and program in (None, "iotcore"):
         return "iotcore", [sys.executable, "-m", "iotcore", "--listen", HOST, "--port", str(port), "--log-level", "ERROR"]
     raise BrokerError(f"no broker to start: install {program or 'mosquitto (Debian), or iotcore (PyPI)'}")
 
 
 def _is_root() -> bool:
-    import os
-
     return hasattr(os, "geteuid") and os.geteuid() == 0
 
 

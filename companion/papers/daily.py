@@ -190,7 +190,9 @@ def _resolution(tank: TankSettings, start_s: float, end_s: float) -> float:
 
 
 def _overlap(period: Period, start_s: float, end_s: float) -> bool:
-    return (period.start is None or period.start.timestamp() < end_s) and (period.end is None or period.end.timestamp() > start_s)
+    return (period.start is None or period.start.timestamp() < end_s) and (
+        period.end is None or period.end.timestamp() > start_s
+    )
 
 
 def _extreme(place: Callable[[Column], np.intp], levels: Column) -> int | None:

@@ -39,9 +39,9 @@ def _notes(tank: TankSettings) -> list[str]:
     top = tank.overflow_level_m if tank.overflow_level_m is not None else float(table.levels_m[-1])
     if tank.overflow_level_m is None:
         notes.append("overflow_level is not told, so no overflow can be noticed")
-    elif top > table.levels_m[-1]:
+    elif top > table.levels_m[-1] + 1e-6:
         notes.append(f"overflow_level {top:g} m is above the table's end, {table.levels_m[-1]:g} m: volume stops rising there")
-    if tank.height_m is not None and table.levels_m[-1] > tank.height_m:
+    if tank.height_m is not None and table.levels_m[-1] > tank.height_m + 1e-6:
         notes.append(f"the table reaches {table.levels_m[-1]:g} m, above the tank's height, {tank.height_m:g} m")
     if sensor.signal != "level":
         core = tank.core(last)

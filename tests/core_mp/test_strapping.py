@@ -28,7 +28,9 @@ def test_outside_the_table_the_end_row_serves() -> None:
     assert (NORTH.area(-1.0), NORTH.area(7.0)) == (20.0, 22.0)
 
 
-@pytest.mark.parametrize("rows_", [([0.0], [0.0]), ([0, 1, 1], [0, 1, 2]), ([0, 1, 2], [0, 2, 1]), ([0, 1], [0, 1, 2]), ([0, math.nan], [0, 1])])
+@pytest.mark.parametrize(
+    "rows_", [([0.0], [0.0]), ([0, 1, 1], [0, 1, 2]), ([0, 1, 2], [0, 2, 1]), ([0, 1], [0, 1, 2]), ([0, math.nan], [0, 1])]
+)
 def test_rows_that_do_not_rise_are_refused(rows_: tuple[list[float], list[float]]) -> None:
     with pytest.raises((ValueError, IndexError)):
         StrappingTable(*rows_)
@@ -56,10 +58,14 @@ def test_a_table_errs_by_no_more_than_the_chord_bound(spacing: float) -> None:
     table = StrappingTable(levels.tolist(), (math.pi * a**2 * levels**2 * (3 * b - levels) / (3 * b**2)).tolist())
     bound = 2.0 * math.pi * a**2 / b * (levels[1] - levels[0]) ** 2 / 8.0
     for row in SPHEROID:
-        assert abs(table.volume(float(row["depth_m"])) - float(row["volume_m3"])) <= bound + 1e-9 * float(row["total_volume_m3"])
+        assert abs(table.volume(float(row["depth_m"])) - float(row["volume_m3"])) <= bound + 1e-9 * float(
+            row["total_volume_m3"]
+        )
 
 
-@pytest.mark.parametrize("tank", [TANK(D=3.0, L=12.0, horizontal=True), TANK(D=4.0, L=6.0, horizontal=False, sideA="conical", sideA_a=1.5)])
+@pytest.mark.parametrize(
+    "tank", [TANK(D=3.0, L=12.0, horizontal=True), TANK(D=4.0, L=6.0, horizontal=False, sideA="conical", sideA_a=1.5)]
+)
 def test_a_fine_table_follows_the_librarys_shapes(tank: TANK) -> None:
     # PyPI fluids, geometry.TANK.V_from_h
     levels = np.linspace(0.0, tank.h_max, 2001)

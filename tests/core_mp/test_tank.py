@@ -22,7 +22,9 @@ SCALE = [(0.004, 0.0), (0.020, 1e5)]
 def tank(**others: object) -> Tank:
     settings = {"height_m": 0.5, "floor_m": 300.0, "t_c": 10.0, "rise_m": -9.0, "standard_pa": standard_pressure(309.5),
                 "air_per_pa": air_density(1.0, 10.0)}  # fmt: skip
-    return Tank(Transmitter(SCALE, LOOP, (0, 65535)), StrappingTable([1.0, 9.0], [80.0, 720.0]), water_density, **(settings | others))
+    return Tank(
+        Transmitter(SCALE, LOOP, (0, 65535)), StrappingTable([1.0, 9.0], [80.0, 720.0]), water_density, **(settings | others)
+    )
 
 
 def counts(milliamperes: float) -> int:
@@ -37,7 +39,9 @@ def test_a_plain_reading_says_nothing_and_gives_all() -> None:
     assert volume == pytest.approx(80.0 * level)
 
 
-@pytest.mark.parametrize(("milliamperes", "said"), [(0.0, bits.LOOP_LOW), (3.55, bits.LOOP_LOW), (21.1, bits.LOOP_HIGH), (24.0, bits.LOOP_HIGH)])
+@pytest.mark.parametrize(
+    ("milliamperes", "said"), [(0.0, bits.LOOP_LOW), (3.55, bits.LOOP_LOW), (21.1, bits.LOOP_HIGH), (24.0, bits.LOOP_HIGH)]
+)
 def test_a_faulty_loop_gives_no_number(milliamperes: float, said: int) -> None:
     status, *figures = tank().measure(counts(milliamperes), 10.0, 97000.0)
     assert status & said and all(math.isnan(figure) for figure in figures)
@@ -76,7 +80,9 @@ def test_without_a_temperature_the_default_serves_and_it_is_said(temperature: fl
 
 
 @pytest.mark.parametrize("barometer", [None, math.nan, 970.0, 2e5])
-def test_an_absolute_sensor_without_barometer_is_read_against_the_standard_atmosphere_and_it_is_said(barometer: float | None) -> None:
+def test_an_absolute_sensor_without_barometer_is_read_against_the_standard_atmosphere_and_it_is_said(
+    barometer: float | None,
+) -> None:
     sensor = Transmitter([(0, 0.0), (20000, 2e5)])
     absolute = Tank(sensor, StrappingTable([0, 12], [0, 12]), water_density, 0.0, 0.5, 300.0, standard_pa=96000.0)
     without, with_standard = absolute.measure(15000, 10.0, barometer), absolute.measure(15000, 10.0, 96000.0)

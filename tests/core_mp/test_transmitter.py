@@ -14,7 +14,9 @@ from core_mp.transmitter import Transmitter
 LOOP = [(4000, 0.004), (20000, 0.020)]
 
 
-@pytest.mark.parametrize("row", rows("signal_levels", lambda row: row["kind"] == "classify"), ids=lambda row: row["example_input"])
+@pytest.mark.parametrize(
+    "row", rows("signal_levels", lambda row: row["kind"] == "classify"), ids=lambda row: row["example_input"]
+)
 @pytest.mark.parametrize("way", ["counts", "current"])
 def test_a_loop_is_judged_as_ne_43_says(row: dict[str, str], way: str) -> None:
     milliamperes = float(row["example_input"].split()[0])
@@ -26,7 +28,9 @@ def test_a_loop_is_judged_as_ne_43_says(row: dict[str, str], way: str) -> None:
     assert {"fault": bool(fault), "undefined": bool(doubtful) and not fault, "valid": status == 0}[row["example_output"]]
 
 
-@pytest.mark.parametrize("row", rows("signal_levels", lambda row: row["kind"] == "example"), ids=lambda row: f"{row['name']} {row['example_input']}")
+@pytest.mark.parametrize(
+    "row", rows("signal_levels", lambda row: row["kind"] == "example"), ids=lambda row: f"{row['name']} {row['example_input']}"
+)
 def test_worked_examples_of_signals(row: dict[str, str]) -> None:
     low, high = float(row["lower"]) * 1e3, float(row["upper"]) * 1e3
     x = float(row["example_input"].split()[0])

@@ -80,10 +80,14 @@ def test_chunks_leave_no_seam(tmp_path: Path) -> None:
 
 def test_each_reading_takes_the_settings_in_force_at_its_time(tmp_path: Path) -> None:
     text = SITE.replace("[tank.north.sensor]", "[[tank.north.sensor]]")
-    later = text[text.index("[[tank.north.sensor]]") :].replace("[[tank.north.sensor]]", "[[tank.north.sensor]]\nsince = 2026-03-01T00:02:00Z")
+    later = text[text.index("[[tank.north.sensor]]") :].replace(
+        "[[tank.north.sensor]]", "[[tank.north.sensor]]\nsince = 2026-03-01T00:02:00Z"
+    )
     tank = site_of(tmp_path, text + later.replace('"0.1 m"', '"0.6 m"')).tank("north")
     levels = convert(tank, minutes([20000.0] * 4, temperature_c=[10.0] * 4))["level_m"]
-    assert levels[1] == levels[0] and levels[2] == levels[3] and levels[2] - levels[1] == pytest.approx(0.5, abs=0.001)  # less the air between
+    assert (
+        levels[1] == levels[0] and levels[2] == levels[3] and levels[2] - levels[1] == pytest.approx(0.5, abs=0.001)
+    )  # less the air between
     shuffled = minutes([20000.0] * 4, temperature_c=[10.0] * 4).iloc[[3, 0, 2, 1]]
     assert convert(tank, shuffled)["level_m"].tolist() == [levels[3], levels[0], levels[2], levels[1]]
 
@@ -115,7 +119,11 @@ def test_uncertainty_carries_accuracy_and_resolution(tmp_path: Path) -> None:
     assert np.isnan(without["level_u95_m"]) and without["level_m"] > 0.0
 
 
-@pytest.mark.parametrize("row", rows("shell_temperature", lambda row: row["temp_unit"] == "C" and "bare" in row["kind"]), ids=lambda row: row["T_liquid"])
+@pytest.mark.parametrize(
+    "row",
+    rows("shell_temperature", lambda row: row["temp_unit"] == "C" and "bare" in row["kind"]),
+    ids=lambda row: row["T_liquid"],
+)
 def test_a_warm_shell_holds_more(row: dict[str, str], tmp_path: Path) -> None:
     # API MPMS 12.1.1's CTSh for bare shells, (1 + a dT)^2 with T_shell = (7 T_liquid + T_ambient) / 8
     text = SITE.replace(

@@ -34,7 +34,9 @@ def test_the_published_rows_are_what_epanet_gives_now(days, name: tuple[str, str
 
 @pytest.mark.parametrize("kind", ["gauge", "absolute"])
 @pytest.mark.parametrize("name", TANKS, ids="-".join)
-def test_level_volume_and_grade_are_epanets_within_the_sensors_counts(days, name: tuple[str, str], kind: str, tmp_path: Path) -> None:
+def test_level_volume_and_grade_are_epanets_within_the_sensors_counts(
+    days, name: tuple[str, str], kind: str, tmp_path: Path
+) -> None:
     """Half a count, and for a gauge sensor the weather, which it has no barometer to see: 1.5 mm at 42 m."""
     day = days[name]
     tank = site_with(day, kind, tmp_path).tank("t")

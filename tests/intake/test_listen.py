@@ -70,7 +70,13 @@ def client(broker: Broker) -> Iterator[mqtt.Client]:
 
 
 def payload(first: int, n: int) -> str:
-    return senml.pack("north", "counts", "k1", 0, [(seq, 1767225600 + 60 * seq, 7000 + seq, 9.5, None, None, 3.6) for seq in range(first, first + n)])
+    return senml.pack(
+        "north",
+        "counts",
+        "k1",
+        0,
+        [(seq, 1767225600 + 60 * seq, 7000 + seq, 9.5, None, None, 3.6) for seq in range(first, first + n)],
+    )
 
 
 def eventually(condition, seconds: float = 10.0) -> None:
@@ -173,7 +179,7 @@ def test_a_broker_on_another_machine_needs_tls_and_a_password_its_variable(tmp_p
 
 
 def test_mqtt_5_works_as_well(broker: Broker, tmp_path: Path) -> None:
-    site = site_of(tmp_path, SITE + f'[mqtt]\nport = {broker.port}\nprotocol = 5\n')
+    site = site_of(tmp_path, SITE + f"[mqtt]\nport = {broker.port}\nprotocol = 5\n")
     with listening(site), client(broker) as logger:
         logger.publish(TOPIC, payload(0, 3), qos=1)
         eventually(lambda: stored(site) == [0, 1, 2])

@@ -28,7 +28,15 @@ GOOD = ({"bn": "north/", "bt": 1767225600, "n": "counts", "v": 100}, {"n": "life
 def test_rfc_8428_multiple_datapoints_resolve_as_printed() -> None:
     """RFC 8428, 5.1.2 and 5.1.3: the second example's pack and the resolved records printed in 5.1.4 (times from memory of the RFC)."""
     source = pack(
-        {"bn": "urn:dev:ow:10e2073a01080063:", "bt": 1.276020076001e09, "bu": "A", "bver": 5, "n": "voltage", "u": "V", "v": 120.1},
+        {
+            "bn": "urn:dev:ow:10e2073a01080063:",
+            "bt": 1.276020076001e09,
+            "bu": "A",
+            "bver": 5,
+            "n": "voltage",
+            "u": "V",
+            "v": 120.1,
+        },
         {"n": "current", "t": -5, "v": 1.2},
         {"n": "current", "t": -4, "v": 1.3},
         {"n": "current", "v": 1.7},
@@ -37,29 +45,56 @@ def test_rfc_8428_multiple_datapoints_resolve_as_printed() -> None:
     assert [(record.name, record.unit, record.value) for record in records] == [
         ("urn:dev:ow:10e2073a01080063:voltage", "V", 120.1), ("urn:dev:ow:10e2073a01080063:current", "A", 1.2),
         ("urn:dev:ow:10e2073a01080063:current", "A", 1.3), ("urn:dev:ow:10e2073a01080063:current", "A", 1.7)]  # fmt: skip
-    assert [record.time for record in records] == pytest.approx([1.276020076001e9, 1.276020071001e9, 1.276020072001e9, 1.276020076001e9])
+    assert [record.time for record in records] == pytest.approx(
+        [1.276020076001e9, 1.276020071001e9, 1.276020072001e9, 1.276020076001e9]
+    )
 
 
 def test_rfc_8428_base_value_is_added_and_base_records_may_stand_alone() -> None:
-    records = resolve(pack({"bn": "a:", "bv": 10}, {"n": "x", "v": 1.5}, {"n": "y"}, {"bn": "b:", "bv": 0, "n": "z", "vb": True}))
+    records = resolve(
+        pack({"bn": "a:", "bv": 10}, {"n": "x", "v": 1.5}, {"n": "y"}, {"bn": "b:", "bv": 0, "n": "z", "vb": True})
+    )
     assert [(record.name, record.value) for record in records[:3]] == [("a:", 10), ("a:x", 11.5), ("a:y", 10)]
     assert records[3].value is True
 
 
 def test_a_pack_is_read() -> None:
-    found = read(pack(*GOOD, {"n": "temperature", "u": "Cel", "v": 9.5}, {"n": "oldest", "v": 5}, {"t": 60, "n": "counts", "v": 101}, {"t": 60, "n": "seq", "v": 8}))
+    found = read(
+        pack(
+            *GOOD,
+            {"n": "temperature", "u": "Cel", "v": 9.5},
+            {"n": "oldest", "v": 5},
+            {"t": 60, "n": "counts", "v": 101},
+            {"t": 60, "n": "seq", "v": 8},
+        )
+    )
     assert found.frame["raw"].tolist() == [100.0, 101.0] and found.frame["seq"].tolist() == [7, 8]
     assert (found.life, found.oldest, found.faults) == ("k", 5, [])
     assert found.frame["time"].astype(str).tolist() == ["2026-01-01 00:00:00+00:00", "2026-01-01 00:01:00+00:00"]
 
 
 def test_a_logger_without_a_clock_says_how_long_ago() -> None:
-    found = read(pack({"bn": "north/", "n": "counts", "v": 1, "t": -90}, {"n": "seq", "v": 1, "t": -90}, {"n": "counts", "v": 2}, {"n": "seq", "v": 2}))
+    found = read(
+        pack(
+            {"bn": "north/", "n": "counts", "v": 1, "t": -90},
+            {"n": "seq", "v": 1, "t": -90},
+            {"n": "counts", "v": 2},
+            {"n": "seq", "v": 2},
+        )
+    )
     assert [at.timestamp() for at in found.frame["time"]] == [NOW - 90, NOW]
 
 
 def test_a_good_reading_beside_a_bad_one_is_kept() -> None:
-    found = read(pack(*GOOD, {"t": 60, "n": "counts", "v": 5}, {"t": 60, "n": "seq", "v": 1.5}, {"t": 120, "n": "counts", "v": 6}, {"t": 120, "n": "seq", "v": 9}))
+    found = read(
+        pack(
+            *GOOD,
+            {"t": 60, "n": "counts", "v": 5},
+            {"t": 60, "n": "seq", "v": 1.5},
+            {"t": 120, "n": "counts", "v": 6},
+            {"t": 120, "n": "seq", "v": 9},
+        )
+    )
     assert found.frame["seq"].tolist() == [7, 9]
     assert found.faults == ["reading of 1767225660: seq 1.5 is no whole number from 0 up"]
 
@@ -69,7 +104,10 @@ def test_a_good_reading_beside_a_bad_one_is_kept() -> None:
     [
         (({**GOOD[0]}, {"n": "temperature", "u": "K", "v": 280}), "temperature in 'K', wanted is 'Cel'"),
         (({**GOOD[0]}, {"n": "temperature", "v": 8}), "temperature in None"),
-        (({"bn": "north/", "bt": 1767225600, "n": "current", "u": "A", "v": 0.01},), "sends current, the site file says counts"),
+        (
+            ({"bn": "north/", "bt": 1767225600, "n": "current", "u": "A", "v": 0.01},),
+            "sends current, the site file says counts",
+        ),
         (({"bn": "north/", "bt": 1767225600, "n": "seq", "v": 3},), "sends no raw signal"),
         (({**GOOD[0], "bt": 300_000_000},), "before 2000"),
         (({**GOOD[0]}, {"n": "mood", "v": 3}), "'mood' is no name known here"),
@@ -121,7 +159,12 @@ def test_a_topic_of_no_tank_is_refused(topic: str, says: str) -> None:
 json_values = st.recursive(st.one_of(st.none(), st.booleans(), st.integers(), st.floats(), st.text(max_size=8)),
                            lambda inner: st.one_of(st.lists(inner, max_size=3), st.dictionaries(st.text(max_size=4), inner, max_size=3)), max_leaves=8)  # fmt: skip
 labels = st.sampled_from(["bn", "bt", "bu", "bv", "bver", "n", "u", "v", "vs", "vb", "vd", "s", "t", "ut", "x_", "other"])
-records = st.lists(st.dictionaries(labels, st.one_of(json_values, st.sampled_from(["north/", "counts", "seq", "life", 5, 1767225600])), max_size=5), max_size=6)
+records = st.lists(
+    st.dictionaries(
+        labels, st.one_of(json_values, st.sampled_from(["north/", "counts", "seq", "life", 5, 1767225600])), max_size=5
+    ),
+    max_size=6,
+)
 
 
 @given(st.one_of(st.binary(max_size=200), records.map(lambda r: json.dumps(r).encode())))

@@ -84,7 +84,9 @@ def test_a_gap_is_told_and_counted(site: Site) -> None:
 def test_a_gap_over_midnight_is_bridged_with_a_wider_doubt_up_to_six_hours(tmp_path: Path) -> None:
     site = site_of(tmp_path)
     t = np.arange(0, 54 * 60)
-    frame = frame_of(np.datetime64("2026-01-14T20:00:00") + t.astype("timedelta64[m]"), np.round(16000 + 4000 * np.sin(t / 200.0)))
+    frame = frame_of(
+        np.datetime64("2026-01-14T20:00:00") + t.astype("timedelta64[m]"), np.round(16000 + 4000 * np.sin(t / 200.0))
+    )
     whole = log(site, frame, "2026-01-15", "2026-01-15").iloc[0]
     short = log(site, drop(frame, "2026-01-14T21:30:00", "2026-01-15T01:00:00"), "2026-01-15", "2026-01-15").iloc[0]
     assert "opening: interpolated over a gap of 3 h 31 min" in short["remarks"]
@@ -107,7 +109,10 @@ def test_a_day_without_readings_says_so(site: Site) -> None:
 def test_a_file_of_one_local_day_is_closed_by_its_last_reading(site: Site) -> None:
     frame = readings("2026-01-14T23:00:00", 24, lambda h: 2.0 + 0.1 * h).iloc[:-1]  # 00:00 to 23:59
     row = log(site, frame, "2026-01-15", "2026-01-15").iloc[0]
-    assert row["closing_level_m"] == pytest.approx(4.398, abs=0.001) and "closing: taken from the reading nearest to midnight" in row["remarks"]
+    assert (
+        row["closing_level_m"] == pytest.approx(4.398, abs=0.001)
+        and "closing: taken from the reading nearest to midnight" in row["remarks"]
+    )
 
 
 def test_faults_and_overflow_are_told(tmp_path: Path) -> None:
@@ -132,7 +137,11 @@ def test_every_row_adds_up_as_printed_and_days_join(waves, seed: int, holes: lis
     site = site_of(folder, LEVEL_SITE.replace('"sqlite', '"sqlite'))
     rng = np.random.default_rng(seed)
     t = np.arange(5 * 1440)
-    level = 5.0 + sum(a * np.sin(t / 60.0 / hours * 2 * np.pi + phase) for a, hours, phase in waves) / len(waves) + 0.003 * rng.standard_normal(len(t))
+    level = (
+        5.0
+        + sum(a * np.sin(t / 60.0 / hours * 2 * np.pi + phase) for a, hours, phase in waves) / len(waves)
+        + 0.003 * rng.standard_normal(len(t))
+    )
     frame = frame_of(np.datetime64("2026-03-27T00:00:00") + t.astype("timedelta64[m]"), level)
     keep = np.ones(len(t), bool)
     for hole in holes:
@@ -152,7 +161,9 @@ def test_every_row_adds_up_as_printed_and_days_join(waves, seed: int, holes: lis
         assert float(row["minimum_level_m"]) <= min(float(row["opening_level_m"]), float(row["closing_level_m"]))
         assert float(row["maximum_level_m"]) >= max(float(row["opening_level_m"]), float(row["closing_level_m"]))
     for before, after in zip(printed, printed[1:], strict=False):
-        assert before["closing_volume_m3"] == after["opening_volume_m3"] and before["closing_level_m"] == after["opening_level_m"]
+        assert (
+            before["closing_volume_m3"] == after["opening_volume_m3"] and before["closing_level_m"] == after["opening_level_m"]
+        )
 
 
 def test_a_log_over_many_days_has_the_same_rows_as_each_day_alone(tmp_path: Path) -> None:

@@ -32,7 +32,9 @@ def figures(site: Site, hours: float = 48.0, gap: tuple[int, int] | None = None,
     raw = np.round(16000 + 6000 * np.sin(t / 150.0))
     if fault:
         raw[slice(*fault)] = 5000
-    frame = frame_of(np.datetime64(START.replace(tzinfo=None)) + t.astype("timedelta64[m]"), raw, temperature_c=np.full(len(t), 9.0))
+    frame = frame_of(
+        np.datetime64(START.replace(tzinfo=None)) + t.astype("timedelta64[m]"), raw, temperature_c=np.full(len(t), 9.0)
+    )
     if gap:
         frame = frame.drop(range(*gap)).reset_index(drop=True)
     return convert(site.tank("north"), frame)
@@ -44,7 +46,9 @@ def words_of(path: Path) -> str:
 
 def test_the_svg_names_units_limits_zone_gaps_and_faults(site: Site, tmp_path: Path) -> None:
     path = tmp_path / "t.svg"
-    draw_trend(site, site.tank("north"), figures(site, gap=(700, 1100), fault=(1500, 1560)), START, START + timedelta(hours=48), path)
+    draw_trend(
+        site, site.tank("north"), figures(site, gap=(700, 1100), fault=(1500, 1560)), START, START + timedelta(hours=48), path
+    )
     said = words_of(path)
     for word in ("Level [m]", "Volume [m³]", "Hydraulic grade [m]", "(on test datum)", "Local time, Europe/Berlin", "clocks change in this time",
                  "overflow 9.50 m", "low 1.00 m", "high 9.00 m", "no readings", "6 h 41 min", "loop_low", "(95 %)", "no protection system"):  # fmt: skip
@@ -109,7 +113,10 @@ def test_a_long_plateau_with_one_spike_keeps_the_spike() -> None:
 
 
 def test_another_suffix_or_folder_is_one_clear_error(site: Site, tmp_path: Path) -> None:
-    for path, says in ((tmp_path / "t.bmp", "a picture ends in .png, .svg, .pdf"), (tmp_path / "no" / "t.png", "does not exist")):
+    for path, says in (
+        (tmp_path / "t.bmp", "a picture ends in .png, .svg, .pdf"),
+        (tmp_path / "no" / "t.png", "does not exist"),
+    ):
         with pytest.raises(FileFault, match=re.escape(says)):
             draw_trend(site, site.tank("north"), figures(site), START, START + timedelta(hours=48), path)
 
@@ -117,4 +124,6 @@ def test_another_suffix_or_folder_is_one_clear_error(site: Site, tmp_path: Path)
 def test_the_summary_is_in_words(site: Site) -> None:
     said = summary_of(site, site.tank("north"), figures(site), START, START + timedelta(hours=48))
     assert said.startswith("north, 2026-03-29 00:00 to 2026-03-31 01:00 Europe/Berlin: 2,880 readings, level ")
-    assert "no readings with a level" in summary_of(site, site.tank("north"), figures(site, 0.0), START, START + timedelta(hours=48))
+    assert "no readings with a level" in summary_of(
+        site, site.tank("north"), figures(site, 0.0), START, START + timedelta(hours=48)
+    )

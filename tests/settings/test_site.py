@@ -62,7 +62,11 @@ height = "0.2 m"
 scale = [[0, "0 bar"], [1000, "1 bar"]]
 """
     periods = site_of(tmp_path, text).tank("north").periods()
-    assert [period.start for period in periods] == [None, datetime(2026, 3, 1, 11, tzinfo=UTC), datetime(2026, 6, 1, tzinfo=UTC)]
+    assert [period.start for period in periods] == [
+        None,
+        datetime(2026, 3, 1, 11, tzinfo=UTC),
+        datetime(2026, 6, 1, tzinfo=UTC),
+    ]
     assert [period.end for period in periods] == [periods[1].start, periods[2].start, None]
     assert [period.sensor.height_m for period in periods] == [0.1, 0.2, 0.2]
     assert [float(period.strapping.volumes_m3[-1]) for period in periods] == pytest.approx([800.0, 800.0, 900.0])
@@ -134,7 +138,12 @@ def test_each_fault_names_its_key_and_the_remedy(tmp_path: Path, old: str, new: 
 
 
 def test_all_faults_are_told_at_once(tmp_path: Path) -> None:
-    text = SITE.replace('"100 m"', "100").replace("latitude = 52.0", "latitude = 95").replace('"0.1 m"', '"0.1 foo"').replace("10000,", "4000,")
+    text = (
+        SITE.replace('"100 m"', "100")
+        .replace("latitude = 52.0", "latitude = 95")
+        .replace('"0.1 m"', '"0.1 foo"')
+        .replace("10000,", "4000,")
+    )
     assert len(faults(tmp_path, text)) == 3
     found = faults(tmp_path, text, TABLE.replace("10000,", "4000,"))
     assert len(found) == 4 and any("north.csv: line 4: the level must rise" in fault for fault in found)
@@ -145,7 +154,9 @@ def test_a_site_without_tanks_is_told_what_to_write(tmp_path: Path) -> None:
 
 
 def test_two_settings_of_one_date_are_refused(tmp_path: Path) -> None:
-    sensor = SITE[SITE.index("[tank.north.sensor]") :].replace("[tank.north.sensor]", "[[tank.north.sensor]]\nsince = 2026-01-01T00:00:00Z")
+    sensor = SITE[SITE.index("[tank.north.sensor]") :].replace(
+        "[tank.north.sensor]", "[[tank.north.sensor]]\nsince = 2026-01-01T00:00:00Z"
+    )
     text = SITE[: SITE.index("[tank.north.sensor]")] + sensor + sensor
     assert any("two of them hold since 2026-01-01T00:00:00Z" in fault for fault in faults(tmp_path, text))
 
@@ -163,7 +174,9 @@ def test_a_missing_site_file_is_one_line(tmp_path: Path) -> None:
 
 
 def test_notes_say_what_deserves_a_thought(tmp_path: Path) -> None:
-    text = SITE.replace('"1 bar"', '"0.5 bar"').replace('accuracy = "0.1 %"\n', "").replace('reference_elevation = "110 m"\n', "")
+    text = (
+        SITE.replace('"1 bar"', '"0.5 bar"').replace('accuracy = "0.1 %"\n', "").replace('reference_elevation = "110 m"\n', "")
+    )
     said = "\n".join(describe(site_of(tmp_path, text)))
     assert "the sensor's range ends at 50.0 kPa, but the level 9.5 m gives 92.2 kPa" in said
     assert "accuracy is not told" in said and "reference_elevation is not told" in said

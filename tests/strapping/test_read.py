@@ -35,7 +35,10 @@ HEADER = "level [m],volume [m^3]\n"
     [
         ("", "line 1: the header must be like level [mm],volume [L]"),
         ("height,volume\n0,0\n", "line 1: the header must be like level [mm],volume [L], but is 'height,volume'"),
-        ("level [m],volume [gal]\n0,0\n1,1\n", "line 1: volume: \"gal\" can mean more than one unit; write US_gallon or imperial_gallon"),
+        (
+            "level [m],volume [gal]\n0,0\n1,1\n",
+            'line 1: volume: "gal" can mean more than one unit; write US_gallon or imperial_gallon',
+        ),
         ("level [kg],volume [L]\n0,0\n1,1\n", 'line 1: level: "kg" is no unit of length'),
         ("level [m],volume [foo]\n0,0\n1,1\n", 'line 1: volume: "foo" is no unit known here'),
         (HEADER + "0,0\n1,x\n", "line 3: the volume 'x' is not a number"),

@@ -1,0 +1,95 @@
+"""The house keeps its own rules: imports run one way, the board's half imports only what boards have, versions agree."""
+
+from __future__ import annotations
+
+import ast
+import re
+import tomllib
+from pathlib import Path
+
+import pytest
+
+ROOT = Path(__file__).parent.parent
+WINGS = ("units", "strapping", "settings", "book", "intake", "figures", "findings", "papers", "page", "field", "demo", "cli")
+EVERY_BOARD = {"math", "micropython", "array", "struct", "gc", "time", "sys"}
+COMPANION = sorted((ROOT / "companion").rglob("*.py"))
+CORE = sorted((ROOT / "core_mp").glob("*.py"))
+
+
+def imports_of(path: Path) -> set[str]:
+    names = set()
+    for node in ast.walk(ast.parse(path.read_text())):
+        if isinstance(node, ast.Import):
+            names |= {alias.name for alias in node.names}
+        elif isinstance(node, ast.ImportFrom):
+            names.add(node.module or "")
+    return names
+
+
+@pytest.mark.parametrize("path", COMPANION, ids=lambda path: str(path.relative_to(ROOT)))
+def test_a_wing_imports_only_wings_before_it(path: Path) -> None:
+    parts = path.relative_to(ROOT / "companion").with_suffix("").parts
+    own = WINGS.index(parts[0]) if parts[0] in WINGS else -1
+    for name in imports_of(path):
+        if name.startswith("companion."):
+            assert WINGS.index(name.split(".")[1]) <= own, f"{path}: imports {name}"
+
+
+@pytest.mark.parametrize("path", CORE, ids=lambda path: path.name)
+def test_the_loggers_half_imports_only_what_every_board_has(path: Path) -> None:
+    assert {name for name in imports_of(path) if not name.startswith("core_mp")} <= EVERY_BOARD
+
+
+def test_every_public_function_says_what_it_does() -> None:
+    silent = []
+    for path in (*COMPANION, *CORE):
+        tree = ast.parse(path.read_text())
+        silent += [] if ast.get_docstring(tree) else [str(path)]
+        bodies = [tree.body, *(node.body for node in tree.body if isinstance(node, ast.ClassDef))]
+        for node in (node for body in bodies for node in body if isinstance(node, (ast.FunctionDef, ast.ClassDef))):
+            if not node.name.startswith("_") and not ast.get_docstring(node):
+                silent.append(f"{path.relative_to(ROOT)}: {node.name}")
+    assert not silent
+
+
+def test_changelog_and_version_agree() -> None:
+    version = tomllib.loads((ROOT / "pyproject.toml").read_text())["project"]["version"]
+    assert re.findall(r"^## (\S+)", (ROOT / "CHANGELOG.md").read_text(), re.M)[0] == version
+
+
+def test_every_command_and_every_status_word_stands_in_the_readme() -> None:
+    from companion import cli
+    from core_mp.status import WORDS
+
+    readme = (ROOT / "README.md").read_text()
+    for name in re.findall(r'add\("([a-z]+)",', Path(cli.__file__).read_text()):
+        assert f"levelbook {name}" in readme, name
+    for word in WORDS:
+        assert f"`{word}`" in readme, word
+
+
+def test_every_wing_has_a_page() -> None:
+    for folder in {path.parent for path in (*COMPANION, *CORE)} - {ROOT / "companion"}:
+        assert (folder / "README.md").is_file(), folder
+
+
+def test_the_top_level_holds_what_the_map_says_and_nothing_else() -> None:
+    import subprocess
+
+    listed = subprocess.run(["git", "ls-files"], cwd=ROOT, capture_output=True, text=True)
+    if listed.returncode:
+        pytest.skip("not a git checkout")
+    top = {name.split("/")[0] for name in listed.stdout.split("\n") if name and not name.startswith(".")}
+    assert top <= {
+        "README.md",
+        "DEVELOPERS.md",
+        "CHANGELOG.md",
+        "LICENSE",
+        "Makefile",
+        "pyproject.toml",
+        "core_mp",
+        "companion",
+        "tests",
+        "configs",
+        "examples",
+    }
