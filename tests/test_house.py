@@ -93,3 +93,19 @@ def test_the_top_level_holds_what_the_map_says_and_nothing_else() -> None:
         "configs",
         "examples",
     }
+
+
+def test_a_notebook_gets_its_few_names_and_pays_for_none_before() -> None:
+    import subprocess
+    import sys
+
+    program = "import sys, companion\nassert not {'numpy', 'pandas', 'pint'} & set(sys.modules)\nfor name in companion.__all__: assert callable(getattr(companion, name)), name"
+    subprocess.run([sys.executable, "-c", program], cwd=ROOT, check=True)
+
+
+def test_help_loads_nothing_heavy() -> None:
+    import subprocess
+    import sys
+
+    program = "import sys\nfrom companion.cli import main\ntry: main(['--help'])\nexcept SystemExit: pass\nassert not {'numpy', 'pandas', 'pint', 'matplotlib', 'paho'} & set(sys.modules)"
+    subprocess.run([sys.executable, "-c", program], cwd=ROOT, check=True, capture_output=True)
