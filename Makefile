@@ -49,4 +49,4 @@ tools:
 	  apt-get update -qq; \
 	  for package in $$missing; do DEBIAN_FRONTEND=noninteractive apt-get install -y -qq $$package >/dev/null; done; fi
 	@if command -v npm >/dev/null && [ ! -d $(WASM) ]; then \
-	  npm install --silent --no-package-lock --prefix build/wasm @micropython/micropython-webassembly-pyscript >/dev/null || true; fi
+	  npm install --loglevel=error --no-package-lock --prefix build/wasm @micropython/micropython-webassembly-pyscript >/dev/null || true; fi

@@ -64,7 +64,7 @@ def read(text: object, dimension: str) -> float:
 
     Raises QuantityError for a bare number, an unknown or ambiguous unit, another dimension, a number that is not finite.
 
-    >>> read("1 bar", "pressure"), read("50 degF", "temperature"), read("0.1 %", "share")
+    >>> read("1 bar", "pressure"), read("10 degC", "temperature"), read("0.1 %", "share")
     (100000.0, 10.0, 0.001)
     """
     proposed = DIMENSIONS[dimension][1]

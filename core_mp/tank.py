@@ -7,14 +7,15 @@
 p: the sensor's pressure over its reference (vent opening or barometer, at elevation z_ref), z_s: the diaphragm's
 elevation, rho: mean density of the liquid's column, rho_a: density of the air, p_top: gauge pressure in a closed tank's
 headspace. measure() takes one reading through them; companion/figures/convert.py takes columns through the same methods.
+The numbers of status bits are those of status.py, whose names would cost a small board memory.
 """
 
 
 class Tank:
     """A tank with its sensor: where they stand, what they hold.
 
-    transmitter, table: a Transmitter and a StrappingTable. density: the liquid's, a function of temperature [degC], salinity
-    [g/kg] and gauge pressure [Pa], as water.water_density. inside: pressure [Pa, absolute] inside the sensor's reference:
+    transmitter, table: a Transmitter (or its Line) and a StrappingTable (or its Rows). density: the liquid's, a function of temperature [degC], salinity
+    [g/kg] and gauge pressure [Pa], as density.water_density. inside: pressure [Pa, absolute] inside the sensor's reference:
     None for a gauge sensor, 101325 for a sealed, 0 for an absolute one. height_m: of the diaphragm above tank datum.
     floor_m: elevation of tank datum. gravity: [m/s2]. t_c: temperature [degC] where none is measured. The reference (vent
     opening, or barometer): rise_m is the diaphragm's elevation less the reference's, standard_pa the standard atmosphere
@@ -32,11 +33,11 @@ class Tank:
         self.standard_pa = standard_pa
         low, high = transmitter.clear if transmitter.straight else (1, 0)
         self._quick = (low, high, inside) + transmitter.line
-        self._piece = table.piece
+        self._line = [1, 0, 0, 0, 0]  # of the table, that the last level stood on: water moves slowly
         self.filling = density, salinity, gravity
         self.air = air_per_pa * gravity, rise_m
         self._warmth = None
-        self.weight = [0.0, 0.0]
+        self.weight = [0.0, 0.0]  # of the liquid [N/m3] at the last temperature, and what twice its mean pressure [Pa] adds
 
     def measure(self, raw, temperature_c=None, barometer_pa=None, headspace_pa=None, out=None):
         """One reading's figures: [status bits, pressure_pa, level_m, volume_m3, grade_m], in out where it is given.
@@ -47,59 +48,57 @@ class Tank:
         """
         if out is None:
             out = [0] * 5
-        low, high, inside, x, p, slope = self._quick
         out[0] = 0
+        low, high, inside, x, p, slope = self._quick
         if low <= raw <= high:
             p += (raw - x) * slope
         else:
             out[0] = self.transmitter.status(raw)
-            if out[0] & 515:
+            if out[0] & 515:  # LOOP_LOW, LOOP_HIGH, NO_READING
                 out[1] = out[2] = out[3] = out[4] = float("nan")
                 return out
             p = self.transmitter.pressure(raw)
         if temperature_c is None or temperature_c != self._warmth:
             if temperature_c is None or not -5 <= temperature_c <= 95:
                 temperature_c = self.t_c
-                out[0] |= 128
-            self.warm(temperature_c)
+                out[0] |= 128  # NO_TEMPERATURE
+            if temperature_c != self._warmth:
+                self._warmth = temperature_c
+                density, salinity, gravity = self.filling
+                self.weight[0] = gravity * density(temperature_c, salinity, 0)
+                self.weight[1] = (gravity * density(temperature_c, salinity, 1e6) - self.weight[0]) * 0.5e-6
         if barometer_pa is None or not 30e3 <= barometer_pa <= 120e3:
             barometer_pa = self.standard_pa
             if inside is not None:
-                out[0] |= 256
+                out[0] |= 256  # NO_BAROMETER
         if inside is not None:
             p += inside - barometer_pa
-        raw = self.level(p, barometer_pa, headspace_pa)
-        low, high, x, y, slope = self._piece
-        if low < raw < high:
-            out[3] = y + (raw - x) * slope
-        else:
-            raw = self._place(raw, out)
         out[1] = p
-        out[2] = raw
-        raw += self.floor_m
-        out[4] = raw if headspace_pa is None else raw + self.top(p, headspace_pa)
+        level = self.level(p, barometer_pa, headspace_pa)
+        low, high, x, y, slope = self._line
+        if low < level < high:
+            out[3] = y + (level - x) * slope
+        else:
+            level = self._place(level, out)
+        out[2] = level
+        level += self.floor_m
+        out[4] = (
+            level if headspace_pa is None else level + headspace_pa / (self.weight[0] + self.weight[1] * (p + headspace_pa))
+        )
         return out
 
     def _place(self, level, out):
-        """Status bits and volume into out, of a level on another line of the table than the last."""
-        xs = self.table.levels_m
+        """The level and its volume and status bits, where it stands on another line of the table than the last."""
         if level <= self.height_m:
             level = self.height_m
-            out[0] |= 16
-        if level < xs[0]:
-            out[0] |= 32
-        elif level > xs[-1]:
-            out[0] |= 64
-        out[3] = self.table.volume(level)
-        self._piece[0] = max(self._piece[0], self.height_m)
+            out[0] |= 16  # DRY
+        if level < self.table.levels_m[0]:
+            out[0] |= 32  # BELOW_TABLE
+        elif level > self.table.levels_m[-1]:
+            out[0] |= 64  # ABOVE_TABLE
+        out[3] = self.table.volume(level, self._line)
+        self._line[0] = max(self._line[0], self.height_m)
         return level
-
-    def warm(self, t_c):
-        """Take the liquid's weight [N/m3] at a temperature [degC] for the figures that follow."""
-        self._warmth = t_c
-        density, salinity, gravity = self.filling
-        self.weight[0] = gravity * density(t_c, salinity, 0)
-        self.weight[1] = (gravity * density(t_c, salinity, 1e6) - self.weight[0]) * 0.5e-6
 
     def level(self, p, barometer_pa, p_top=None):
         """Level [m above tank datum] from pressures [Pa] over the reference; at height_m or below it the tank is dry."""
@@ -113,8 +112,3 @@ class Tank:
             weight = weight + more * p_top
             p = (p - p_top) / weight
         return p + self.height_m
-
-    def top(self, p, p_top):
-        """Head [m] that a headspace's gauge pressure [Pa] adds to the hydraulic grade."""
-        weight, more = self.weight
-        return p_top / (weight + more * (p + p_top))

@@ -78,7 +78,7 @@ def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temper
     if not low <= raw.min() <= raw.max() <= high:
         status |= core.transmitter.status(raw)
     if period.sensor.signal == "level":
-        p, level, top = np.full(len(raw), np.nan), raw.copy(), 0.0
+        p, level = np.full(len(raw), np.nan), raw.copy()
         weight: Column | float = np.nan
     else:
         t = _believed(temperature, -5.0, 95.0, core.t_c, status, bits.NO_TEMPERATURE)
@@ -93,7 +93,6 @@ def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temper
         weight = gravity * density(t, salinity, 0.5 * (p if headspace is None else p + headspace))
         core.weight = [weight, 0.0]  # type: ignore[list-item]  # a column where a logger has a number
         level = core.level(p, air, headspace)
-        top = 0.0 if headspace is None else core.top(p, headspace)
         if not level.min() > core.height_m:
             dry = level <= core.height_m
             status |= dry * bits.DRY
@@ -103,7 +102,7 @@ def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temper
     out["level_m"][:] = level
     np.add(level, core.floor_m, out=out["grade_m"])
     if headspace is not None:
-        out["grade_m"] += top
+        out["grade_m"] += headspace / weight
     if "level_u95_m" in out:
         _doubts(period, weight, out, status)
     if status.any():

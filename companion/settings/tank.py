@@ -16,10 +16,9 @@ from companion.settings.sensor import INSIDE, Sensor, read_sensor
 from companion.strapping.read import TableError, read_table
 from companion.strapping.shapes import upright_cylinder
 from core_mp.earth import air_density, normal_gravity, standard_pressure, standard_temperature
-from core_mp.liquid import liquid_density
 from core_mp.strapping import StrappingTable
 from core_mp.tank import Tank
-from core_mp.water import water_density
+from core_mp.water import liquid_density, water_density
 
 DEFAULT_TEMPERATURE_C = 15.0
 SEAWATER_G_KG = 35.0

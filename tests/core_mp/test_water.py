@@ -7,8 +7,7 @@ import pytest
 from iapws import IAPWS95, IAPWS97
 from published import rows
 
-from core_mp.liquid import liquid_density
-from core_mp.water import vapour_pressure, water_density
+from core_mp.water import liquid_density, vapour_pressure, water_density
 
 
 @pytest.mark.parametrize("row", rows("water_density"), ids=lambda row: row["temp_C_ITS90"] + " degC")
