@@ -190,6 +190,10 @@ def _daily(args: argparse.Namespace) -> int:
     first, last = _day(args.start, "--from"), _day(args.end, "--to")
     if last < first:
         raise WrongUse(f"--from {first} is after --to {last}; write the earlier day first")
+    if Path(args.output).suffix.lower() in (".xlsx", ".pdf"):
+        raise WrongUse(
+            f"-o {args.output}: the daily log is written as CSV so far; name it {Path(args.output).with_suffix('.csv')}"
+        )
     tanks = [_known(site, name) for name in args.tank] if args.tank else list(site.tanks.values())
     write_daily(args.output, site, tanks, first, last)
     return 0

@@ -49,7 +49,9 @@ def run_demo(out: Path, seconds: float | None = None) -> int:
     with _stopped_by_signals(stop), local_broker() as broker:
         site, fleet, today = _district(out, broker.port)
         _say(f"{site.name}: {len(site.tanks)} tanks, {HISTORY_DAYS} days of one-minute readings in {out / 'book.db'}")
-        _say(f"live over MQTT on {broker.host}:{broker.port} ({broker.program}), a minute each {MINUTE_S} s; Ctrl-C ends it")
+        _say(
+            f"live over MQTT on {broker.host}:{broker.port} ({broker.program}), a minute each {MINUTE_S} s from {today:%d %B} on; Ctrl-C ends it"
+        )
         listener = Listener(site, _say)
         listening = threading.Thread(target=listener.run, args=(quiet := threading.Event(),))
         listening.start()

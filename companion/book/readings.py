@@ -145,6 +145,10 @@ def _header(text: str, name: str, signal: str) -> tuple[list[str], float]:
         else:
             known = ["time", "raw", *HEADINGS, "life", "seq"]
             near = difflib.get_close_matches(heading, known, 1, 0.5)
+            if ";" in heading:
+                raise FileFault(
+                    f"{name}: line 1: columns are separated by semicolons; save the file with commas, and decimal points"
+                )
             hint = f"did you mean {near[0]}?" if near else f"the columns are {', '.join(known)}"
             raise FileFault(f"{name}: line 1: unknown column '{heading}'; {hint}")
     for needed in ("time", "raw"):

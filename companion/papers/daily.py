@@ -9,6 +9,7 @@ net draw holds as printed, since the sums are done in the whole litres that are 
 from __future__ import annotations
 
 import csv
+import sys
 from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import UTC, date, datetime, time, timedelta
@@ -236,7 +237,11 @@ def write_daily(path: str | Path, site: Site, tanks: list[TankSettings], first_d
     with open_book(site.store_url, create=False) as book, aside(path) as file:
         out = csv.writer(file, lineterminator="\n")
         out.writerow(COLUMNS)
-        for tank in tanks:
+        for n, tank in enumerate(tanks, 1):
+            if sys.stderr.isatty():
+                print(
+                    f"\rdaily log: tank {n} of {len(tanks)}", end="\n" if n == len(tanks) else "", file=sys.stderr, flush=True
+                )
             log = daily(site, tank, book.readings(tank.name, start, end), first_day, last_day)
             out.writerows([form(value) for form, value in zip(FORMS, row, strict=True)] for row in log.itertuples(index=False))
 

@@ -101,6 +101,7 @@ def test_rows_out_of_order_are_sorted_and_told(file) -> None:
         ("time,raw,raw\n", "named twice"),
         ("time,raw,life\n", "life and seq stand together"),
         ("time,raw [mA]\n", "the sensor sends counts"),
+        ("time;raw\n", "separated by semicolons; save the file with commas"),
     ],
 )
 def test_a_wrong_header_is_one_clear_error(file, text: str, fault: str) -> None:
@@ -122,6 +123,14 @@ def test_milliamperes_are_named_in_the_header_and_never_guessed(file) -> None:
     assert frame["raw"].tolist() == pytest.approx([0.0125])
     frame, rejects = read_csv(file("time,raw\n2026-03-01T00:00:00Z,12.5\n"), "current")
     assert frame.empty and "write `raw [mA]`" in rejects.rows[0][1]
+
+
+def test_line_ends_and_byte_order_marks_of_other_systems_are_read(tmp_path: Path) -> None:
+    (tmp_path / "r.csv").write_bytes(
+        b"\xef\xbb\xbftime,raw,temperature_degC\r\n2026-03-01T00:00:00Z,1,9.5\r\n2026-03-01T00:01:00Z,2,\r\n"
+    )
+    frame, rejects = read_csv(tmp_path / "r.csv")
+    assert frame["raw"].tolist() == [1.0, 2.0] and frame["temperature_c"][0] == 9.5 and not rejects.rows
 
 
 def test_standard_input_is_read(monkeypatch: pytest.MonkeyPatch) -> None:
