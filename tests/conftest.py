@@ -1,0 +1,10 @@
+"""Property tests: no clock in them, since machines are noisy; in CI the same examples each time, so that red means the change."""
+
+from __future__ import annotations
+
+import os
+
+from hypothesis import settings
+
+settings.register_profile("house", deadline=None, derandomize=bool(os.environ.get("CI")))
+settings.load_profile("house")
