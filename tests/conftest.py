@@ -7,4 +7,5 @@ import os
 from hypothesis import settings
 
 settings.register_profile("house", deadline=None, derandomize=bool(os.environ.get("CI")))
-settings.load_profile("house")
+settings.register_profile("long", deadline=None, max_examples=3000)
+settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "house"))
