@@ -61,15 +61,13 @@ def _by_period(tank: TankSettings, times: pd.Series) -> Iterator[tuple[Period, s
     if len(periods) == 1:
         yield periods[0], slice(0, len(times))
         return
-    starts = [pd.Timestamp(period.start) for period in periods if period.start is not None]
-    edges = pd.DatetimeIndex(starts).as_unit("us").asi8
+    edges = pd.DatetimeIndex([pd.Timestamp(period.start) for period in periods[1:]], tz="UTC").as_unit("us").asi8
     which = np.searchsorted(edges, pd.DatetimeIndex(times).as_unit("us").asi8, side="right")
-    which -= len(edges) - (len(periods) - 1)
     for i, period in enumerate(periods):
-        rows = np.flatnonzero(np.maximum(which, 0) == i)
+        rows = np.flatnonzero(which == i)
         if len(rows):
-            whole = rows[-1] - rows[0] + 1 == len(rows)
-            yield period, slice(int(rows[0]), int(rows[-1]) + 1) if whole else rows
+            together = rows[-1] - rows[0] + 1 == len(rows)
+            yield period, slice(int(rows[0]), int(rows[-1]) + 1) if together else rows
 
 
 def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temperature: Column, barometer: Column,
