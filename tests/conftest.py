@@ -9,3 +9,5 @@ from hypothesis import settings
 settings.register_profile("house", deadline=None, derandomize=bool(os.environ.get("CI")))
 settings.register_profile("long", deadline=None, max_examples=3000)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "house"))
+
+collect_ignore = ["core_mp/power_cuts.py"]  # MicroPython runs it

@@ -61,7 +61,8 @@ def _by_period(tank: TankSettings, times: pd.Series) -> Iterator[tuple[Period, s
     if len(periods) == 1:
         yield periods[0], slice(0, len(times))
         return
-    edges = pd.DatetimeIndex([pd.Timestamp(period.start) for period in periods[1:]], tz="UTC").as_unit("us").asi8
+    starts = [period.start for period in periods[1:] if period.start is not None]
+    edges = pd.DatetimeIndex(starts).as_unit("us").asi8
     which = np.searchsorted(edges, pd.DatetimeIndex(times).as_unit("us").asi8, side="right")
     for i, period in enumerate(periods):
         rows = np.flatnonzero(which == i)
