@@ -17,29 +17,6 @@ import pandas as pd
 ROOT = Path(__file__).parent.parent
 sys.path[:0] = [str(ROOT), str(ROOT / "tests"), str(ROOT / "tests" / "core_mp")]
 
-SITE = """
-format = 1
-[site]
-name = "bench"
-timezone = "Europe/Oslo"
-datum = "local"
-latitude = 60
-units = "metric"
-[tank.north]
-floor_elevation = "312.4 m"
-height = "10 m"
-strapping = "table.csv"
-default_temperature = "10 degC"
-[tank.north.sensor]
-signal = "counts"
-pressure = "gauge"
-height = "0.1 m"
-reference_elevation = "323 m"
-loop = [[6553, "4 mA"], [32767, "20 mA"]]
-scale = [["4 mA", "0 bar"], ["20 mA", "1 bar"]]
-accuracy = "0.1 %"
-"""
-
 
 def against(ours: Callable[[], object], ceiling: Callable[[], object], rounds: int = 5) -> tuple[float, float]:
     """Fastest seconds of each, run in turn."""
@@ -59,14 +36,11 @@ def tell(what: str, ours: float, ceiling: float, goal: float, note: str = "") ->
 
 
 def bench_site(folder: Path):
-    from companion.settings.site import load_site
+    """A tank with a table of 1,000 rows, 4-20 mA gauge sensor, vent above it."""
+    from sites import site_of
 
-    levels = np.linspace(0, 10, 1000)
-    (folder / "table.csv").write_text(
-        "level [m],volume [m3]\n" + "".join(f"{x!r},{50 * x + x**2.5!r}\n" for x in levels.tolist())
-    )
-    (folder / "site.toml").write_text(SITE)
-    return load_site(folder / "site.toml").tank("north")
+    rows = [f"{1000 * x!r},{1000 * (50 * x + x**2.5)!r}" for x in np.linspace(0, 10, 1000).tolist()]
+    return site_of(folder, table="level [mm],volume [L]\n" + "\n".join(rows) + "\n").tank("north")
 
 
 def readings(n: int) -> pd.DataFrame:
@@ -95,7 +69,7 @@ def bench_columns(tank, n: int = 10_000_000) -> None:
         rho = rho + rho * (0.5 * p) * (50.74e-11 + t * (0.00416e-11 * t - 0.326e-11))
         a = air * b
         level = 0.1 + (p + a * rise) / (g * rho - a)
-        return p, level, np.interp(level, xs, ys), 312.4 + level
+        return p, level, np.interp(level, xs, ys), 100.0 + level
 
     def whole() -> None:
         expression(raw, t, b)
@@ -106,6 +80,9 @@ def bench_columns(tank, n: int = 10_000_000) -> None:
             at = slice(start, start + CHUNK)
             out[:, at] = expression(raw[at], t[at], b[at])
 
+    some = frame.iloc[:50_000]
+    level = expression(raw[:50_000], t[:50_000], b[:50_000])[1]
+    assert np.allclose(convert(tank, some, doubts=False)["level_m"], level, rtol=0, atol=1e-9), "the two sides differ"
     ours, ceiling = against(lambda: convert(tank, frame, doubts=False), whole, 3)
     tell("columns: 10 M readings, against the bare expression, whole", ours, ceiling, 1.5)
     ours, ceiling = against(lambda: convert(tank, frame, doubts=False), chunked, 3)
