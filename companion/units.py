@@ -52,6 +52,7 @@ AMBIGUOUS = {
 _PLAIN = {"psig": "psi", "psia": "psi", "barg": "bar", "bara": "bar", "°C": "degC", "°F": "degF", "%": "percent", "‰": "g/kg",
           "inch": "in", "USgal": "US_gallon", "US_gal": "US_gallon", "imp_gal": "imperial_gallon"}  # fmt: skip
 
+_STRANGE = re.compile(r"[^\w\s*/^().°%‰-]")  # in no unit
 _NUMBER = re.compile(r"\s*([-+]?(?:\d[\d_]*\.?\d*|\.\d+)(?:[eE][-+]?\d+)?)\s*(.*?)\s*")
 
 
@@ -92,7 +93,7 @@ def unit_factor(unit: str, dimension: str, number: float = 1.0) -> float:
     for word in re.findall(r"[^\s*/^()\d][^\s*/^()]*", unit):
         if word in AMBIGUOUS:
             raise QuantityError(f'"{unit}" can mean more than one unit; write {AMBIGUOUS[word]}')
-    quantity = _quantity(_spelt(unit), number)
+    quantity = None if _STRANGE.search(unit) else _quantity(_spelt(unit), number)
     if quantity is None:
         raise QuantityError(f'"{unit}" is no unit known here; write {dimension} like "1.5 {proposed}"')
     try:

@@ -11,7 +11,7 @@ import pytest
 
 ROOT = Path(__file__).parent.parent
 WINGS = ("units", "strapping", "settings", "book", "intake", "figures", "findings", "papers", "page", "field", "demo", "cli")
-EVERY_BOARD = {"math", "micropython", "array", "struct", "gc", "time", "sys", "os", "binascii"}
+EVERY_BOARD = {"math", "micropython", "array", "struct", "gc", "time", "sys", "os", "binascii", "select", "socket", "json"}
 COMPANION = sorted((ROOT / "companion").rglob("*.py"))
 CORE = sorted((ROOT / "core_mp").glob("*.py"))
 

@@ -173,7 +173,12 @@ def _quickly(text: str, fields: list[str], factor: float, signal: str,
     except (ValueError, OverflowError, pd.errors.ParserError):
         return None
     raw = table["raw"].to_numpy(float) * factor
-    good = stamps is not None and len(raw) > 0 and np.isfinite(raw).all() and bool((np.diff(stamps) > np.timedelta64(0)).all())
+    good = (
+        stamps is not None
+        and len(raw) > 0
+        and np.isfinite(raw).all()
+        and bool((np.diff(stamps) > np.timedelta64(0, "us")).all())
+    )
     if not good or (signal == "current" and raw.max() > 1.0):
         return None
     if limits is not None and not limits[0] <= raw.min() <= raw.max() <= limits[1]:
