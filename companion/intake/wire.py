@@ -12,6 +12,7 @@ from __future__ import annotations
 import json
 import math
 import re
+import sys
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
@@ -23,6 +24,7 @@ from companion.book.readings import COLUMNS, frame_of
 
 TOPIC = re.compile(r"levelbook/([a-z0-9_-]+)/readings")
 NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9\-:./_]*")  # RFC 8428, 4.5.1
+LIFE = re.compile(r"[!-~]{1,64}")
 RELATIVE = 2**28  # s: resolved times below are relative to now, RFC 8428, 4.5.3
 VERSION = 10  # of SenML, RFC 8428, 4.4
 UNITS = {"counts": None, "current": "A", "voltage": "V", "pressure": "Pa", "level": "m", "temperature": "Cel",
@@ -31,6 +33,11 @@ PLACES = {"temperature": "temperature_c", "barometer": "barometer_pa", "headspac
 SIGNALS = ("counts", "current", "voltage", "pressure", "level")
 NO_LIFE = "wire"  # of a logger that says neither life nor seq: its seq is the time in microseconds
 VALUES = ("v", "vs", "vb", "vd")
+KINDS: dict[str, tuple[type | tuple[type, ...], str]] = {  # of labels, RFC 8428, 4.3
+    **dict.fromkeys(("bn", "bu", "n", "u", "vs", "vd"), (str, "text")),
+    **dict.fromkeys(("bt", "bv", "bver", "t", "v"), ((int, float), "number")),
+    "vb": (bool, "true or false"),
+}
 
 
 class WireError(ValueError):
@@ -72,9 +79,7 @@ def decode(topic: str, payload: bytes, signal_of: Callable[[str], str | None], n
     if strange is not None:
         raise WireError(f"'{strange[:80]}' is not of tank '{tank}', whose topic it came on")
     arrived = time.time() if now is None else now
-    life = next((record.value for record in reversed(records) if record.name == f"{tank}/life"), None)
-    if life is not None and (isinstance(life, (bool, float)) or not isinstance(life, (str, int)) or life == ""):
-        raise WireError(f"life {life!r} is neither text nor a whole number")
+    life = _life([record.value for record in records if record.name == f"{tank}/life"])
     oldest = next((record.value for record in reversed(records) if record.name == f"{tank}/oldest"), None)
     rows, faults = [], []
     for group in _readings(records, len(tank) + 1):
@@ -111,24 +116,38 @@ def resolve(payload: bytes) -> list[Record]:
         if len(told) > 1:
             raise WireError(f"record {n}: has more than one value ({', '.join(told)})")
         value = item[told[0]] if told else None
-        if told == ["v"] or (not told and base["bv"] is not None):
-            value = _checked(n, "v", item.get("v", 0)) + (base["bv"] or 0)
-        at = base["bt"] + _checked(n, "t", item.get("t", 0))
-        records.append(Record(name, at, item.get("u", base["bu"]), value))
+        if told and told != ["v"]:
+            _checked(n, told[0], value)
+        elif told or base["bv"] is not None:
+            value = _checked(n, "v", _checked(n, "v", item.get("v", 0)) + (base["bv"] or 0))
+        at = _checked(n, "t", base["bt"] + _checked(n, "t", item.get("t", 0)))
+        records.append(Record(name, at, _checked(n, "u", item["u"]) if "u" in item else base["bu"], value))
     return records
 
 
 def _checked(n: int, label: str, value: Any) -> Any:
-    """The value of a label, of the type that RFC 8428, 4.3 gives it."""
-    texts = label in ("bn", "bu", "n", "u")
-    good = isinstance(value, str) if texts else isinstance(value, (int, float)) and not isinstance(value, bool)
-    if not good or (not texts and not math.isfinite(value)):
-        raise WireError(f"record {n}: {label} {str(value)[:40]!r} is no {'text' if texts else 'number'}")
+    """The value of a label, of the type that RFC 8428, 4.3 gives it; a number is finite as a float too."""
+    kind, called = KINDS[label]
+    good = isinstance(value, kind) and isinstance(value, bool) == (kind is bool)
+    if not good or (called == "number" and not abs(value) <= sys.float_info.max):
+        raise WireError(f"record {n}: {label} {str(value)[:40]!r} is no {called}")
     return value
 
 
 def _constant(word: str) -> float:
     raise ValueError(f"{word} is no number in JSON")
+
+
+def _life(told: list[Any]) -> str | int | None:
+    """The life that a pack tells; None where it tells none."""
+    if not told:
+        return None
+    life = told[0]
+    if any(other != life for other in told):
+        raise WireError(f"tells two lives, {life!r} and others; send a pack for each")
+    if isinstance(life, (bool, float)) or not isinstance(life, (str, int)) or not LIFE.fullmatch(str(life)):
+        raise WireError(f"life {str(life)[:80]!r} is neither text of 1 to 64 printable ASCII letters nor a whole number")
+    return life
 
 
 def _readings(records: list[Record], prefix: int) -> list[dict[str, Record]]:

@@ -140,7 +140,7 @@ def test_a_bad_reading_is_told(records: tuple[dict[str, object], ...], says: str
         (b'[{"bn":"north/","bver":11,"n":"counts","v":1}]', "SenML version 11"),
         (b'[{"bn":"north/","n":"<script>","v":1}]', "is no SenML name"),
         (b'[{"bn":"mill/","n":"counts","v":1}]', "'mill/counts' is not of tank 'north'"),
-        (b'[{"bn":"north/","n":"counts","v":1},{"n":"life","vb":true}]', "life True is neither"),
+        (b'[{"bn":"north/","n":"counts","v":1},{"n":"life","vb":true}]', "life 'True' is neither"),
     ],
 )
 def test_a_payload_that_is_no_pack_is_refused_with_the_reason(payload: bytes, says: str) -> None:
