@@ -163,7 +163,9 @@ def test_a_listener_killed_at_any_moment_loses_nothing_that_the_broker_keeps(sit
         child.communicate()
     child = subprocess.Popen(command, env=environment, stderr=subprocess.PIPE, text=True)
     assert done.wait(30)
-    eventually(lambda: stored(site) == list(range(600)), 20)
+    with client(broker) as logger:  # once this one is stored, the last listener is up, whatever those before it did
+        logger.publish(TOPIC, payload(600, 1), qos=1).wait_for_publish(5)
+    eventually(lambda: stored(site) == list(range(601)), 20)
     child.send_signal(signal.SIGTERM)
     _, said = child.communicate(timeout=10)
     assert child.returncode == 0 and "listened: " in said
