@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import signal
+import sys
 import threading
 import time
 from collections.abc import Iterator
@@ -20,8 +21,8 @@ from paho.mqtt.enums import CallbackAPIVersion
 
 from companion.book.readings import COLUMNS, write_readings
 from companion.book.store import Book, open_book
-from companion.field.broker import local_broker
-from companion.field.district import LIVES, write_district
+from companion.field.broker import Broker, BrokerError, local_broker
+from companion.field.district import LIVES, check_folder, write_district
 from companion.field.fleet import simulate
 from companion.figures.convert import convert
 from companion.figures.table import write_figures
@@ -37,62 +38,87 @@ AHEAD_DAYS = 2  # simulated live at most
 MINUTE_S = 0.2  # real time of a simulated minute
 SHOWN_MINUTES = 10  # between two looks at the book
 SEED = 20
+LIFE = "sim"
 TIMEZONE = "Europe/London"
+AGAIN_S = 5.0  # a logger sends again what has no receipt for so long
+PACK = 60  # readings in a pack at most
 LIVE_S = 4.0  # of live readings at least, however short the demo
 PAPERS_S = 6.0  # set aside at the end of a timed demo for its files
 
 
 def run_demo(out: Path, seconds: float | None = None) -> int:
-    """Run the demo with its files in out, until Ctrl-C, or for about so many seconds; returns the exit status."""
-    began = time.monotonic()
+    """Run the demo with its files in out, until Ctrl-C or the end of its simulated days, or for about so many seconds.
+
+    Returns the exit status. FileFault where out holds anything but an earlier demo.
+    """
+    check_folder(out)
     stop = threading.Event()
-    with _stopped_by_signals(stop), local_broker() as broker:
-        site, fleet, today = _district(out, broker.port)
-        _say(f"{site.name}: {len(site.tanks)} tanks, {HISTORY_DAYS} days of one-minute readings in {out / 'book.db'}")
-        _say(
-            f"live over MQTT on {broker.host}:{broker.port} ({broker.program}), a minute each {MINUTE_S} s from {today:%d %B} on; Ctrl-C ends it"
-        )
-        listener = Listener(site, _say)
-        listening = threading.Thread(target=listener.run, args=(quiet := threading.Event(),))
-        listening.start()
-        try:
-            if not listener.connected.wait(10.0):
-                raise RuntimeError("the listener could not reach the demo's own broker")
-            live = None if seconds is None else max(LIVE_S, seconds - PAPERS_S - (time.monotonic() - began))
-            _live(site, fleet, broker.port, live, stop)
-        finally:
-            quiet.set()
-            listening.join()
+    try:
+        with _stopped_by_signals(stop), local_broker() as broker:
+            return _run(out, seconds, broker, stop)
+    except BrokerError as error:
+        print(f"levelbook: {error}", file=sys.stderr)
+        return 1
+
+
+def _run(out: Path, seconds: float | None, broker: Broker, stop: threading.Event) -> int:
+    began = time.monotonic()
+    site, fleet, today = _district(out, broker.port)
+    _say(f"{site.name}: {len(site.tanks)} tanks, {HISTORY_DAYS} days of one-minute readings in {out / 'book.db'}")
+    _say(
+        f"live over MQTT on {broker.host}:{broker.port} ({broker.program}), a minute each {MINUTE_S} s from {today:%d %B} on; Ctrl-C ends it"
+    )
+    listener = Listener(site, _say)
+    listening = threading.Thread(target=listener.run, args=(quiet := threading.Event(),))
+    listening.start()
+    try:
+        if not listener.connected.wait(10.0):
+            raise RuntimeError("the listener could not reach the demo's own broker")
+        live = None if seconds is None else max(LIVE_S, seconds - PAPERS_S - (time.monotonic() - began))
+        _live(site, fleet, broker.port, live, stop)
+    finally:
+        quiet.set()
+        listening.join()
     _papers(site, out, today)
     return 0
 
 
 @dataclass
 class Logger:
-    """A simulated logger: what it has yet to publish, and what it may forget, since the book has it."""
+    """A simulated logger: what it has yet to take, and its spool, which it keeps until the book has it."""
 
     tank: str
     signal: str
     coming: pd.DataFrame
     client: mqtt.Client
     spool: list[tuple[Any, ...]] = field(default_factory=list)
+    kept: int = -1  # by the last receipt; the network's thread sets it, the logger's looks
+    sent: int = -1
+    moved: float = 0.0  # when it last sent something new, or again
 
     def take(self, until: pd.Timestamp) -> None:
-        """Spool the readings up to a simulated time, and publish those that have no receipt yet."""
+        """Spool the readings up to a simulated time; publish the new ones, and again what has had no receipt for long."""
         due = self.coming[self.coming["time"] <= until]
         self.coming = self.coming.iloc[len(due) :]
         for row in due.to_dict("records"):
             others = [None if np.isnan(row[name]) else row[name] for name in COLUMNS[2:6]]
             raw = int(row["raw"]) if self.signal == "counts" else row["raw"]
             self.spool.append((row["seq"], int(row["time"].timestamp()), raw, *others))
-        if self.spool:
-            pack = senml.pack(self.tank, self.signal, "sim", self.spool[0][0], self.spool[:60])
+        self.spool = [reading for reading in self.spool if reading[0] > self.kept]
+        now = time.monotonic()
+        if self.spool and self.spool[0][0] <= self.sent and now - self.moved > AGAIN_S:
+            self.sent = self.kept
+        waiting = [reading for reading in self.spool if reading[0] > self.sent][:PACK]
+        if waiting:
+            pack = senml.pack(self.tank, self.signal, LIFE, self.spool[0][0], waiting)
             self.client.publish(f"levelbook/{self.tank}/readings", pack, qos=1)
+            self.sent, self.moved = waiting[-1][0], now
 
     def on_message(self, client: mqtt.Client, userdata: Any, message: mqtt.MQTTMessage) -> None:
-        """A receipt: what the book has is let go."""
-        kept = json.loads(message.payload)["seq"]
-        self.spool = [reading for reading in self.spool if reading[0] > kept]
+        """A receipt: what the book has may go."""
+        receipt = json.loads(message.payload)
+        if receipt["life"] == LIFE:
+            self.kept = max(self.kept, receipt["seq"])
 
 
 def _district(out: Path, port: int) -> tuple[Site, dict[str, pd.DataFrame], datetime]:
@@ -104,7 +130,7 @@ def _district(out: Path, port: int) -> tuple[Site, dict[str, pd.DataFrame], date
     start = today - timedelta(days=HISTORY_DAYS)
     fleet, history = {}, []
     for n, (name, tank) in enumerate(site.tanks.items()):
-        readings, _ = simulate(tank, LIVES[name], start, (HISTORY_DAYS + AHEAD_DAYS) * 1440, SEED + n)
+        readings, _ = simulate(tank, LIVES[name], start, (HISTORY_DAYS + AHEAD_DAYS) * 1440, SEED + n, LIFE)
         past = readings["time"] < pd.Timestamp(today)
         history.append((name, readings[past]))
         fleet[name] = readings[~past]

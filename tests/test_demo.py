@@ -15,6 +15,7 @@ import needs
 import pytest
 
 from companion.book.store import open_book
+from companion.cli import main
 
 COMMAND = [sys.executable, "-c", "import sys; from companion.cli import main; sys.exit(main())", "demo"]
 ENVIRONMENT = os.environ | {"PYTHONPATH": str(needs.ROOT)}
@@ -58,3 +59,19 @@ def test_ctrl_c_ends_the_demo_cleanly_with_its_files(tmp_path: Path) -> None:
     rest, errors = child.communicate(timeout=60)
     assert child.returncode == 0 and errors == "" and "the daily log of" in rest
     assert {path.name for path in (tmp_path / "d").iterdir()} == FILES
+
+
+@pytest.mark.parametrize("name", ["site.toml", "book.db", "notes.txt"])
+def test_a_folder_with_someones_files_is_left_alone(tmp_path: Path, name: str, capsys: pytest.CaptureFixture[str]) -> None:
+    (tmp_path / name).write_text("mine")
+    assert main(["demo", "--for", "1", "--out", str(tmp_path)]) == 1
+    assert "holds files that are not a demo's; name a new or an empty folder" in capsys.readouterr().err
+    assert [path.name for path in tmp_path.iterdir()] == [name] and (tmp_path / name).read_text() == "mine"
+
+
+def test_without_a_broker_the_demo_says_what_to_install(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setenv("LEVELBOOK_BROKER", "absent")
+    assert main(["demo", "--for", "1", "--out", str(tmp_path / "d")]) == 1
+    assert capsys.readouterr().err == "levelbook: no broker to start: install absent\n" and not (tmp_path / "d").exists()

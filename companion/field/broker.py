@@ -1,4 +1,7 @@
-"""An MQTT broker of our own, on loopback, for as long as it is needed: a private mosquitto, or else PyPI's iotcore."""
+"""An MQTT broker of our own, on loopback, for as long as it is needed: a private mosquitto, or else PyPI's iotcore.
+
+It runs on a leash (leash.py): it ends with the block that asked for it, and also when this program is killed.
+"""
 
 from __future__ import annotations
 
@@ -27,6 +30,7 @@ max_inflight_messages 1000
 max_queued_messages 100000
 log_type error
 """
+LEASH = Path(__file__).with_name("leash.py")
 WAIT_S = 10.0
 
 
@@ -53,18 +57,15 @@ def local_broker(port: int = 0, program: str | None = None) -> Iterator[Broker]:
     with tempfile.TemporaryDirectory(prefix="levelbook-broker-") as folder:
         name, command = _command(program, port, Path(folder))
         child = subprocess.Popen(
-            command, stdin=subprocess.DEVNULL, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True
-        )
+            [sys.executable, "-I", "-S", str(LEASH), folder, *command],
+            stdin=subprocess.PIPE, stdout=subprocess.DEVNULL, stderr=subprocess.DEVNULL, start_new_session=True)  # fmt: skip
         try:
             _await(child, port, name)
             yield Broker(HOST, port, name)
         finally:
-            child.terminate()
-            try:
-                child.wait(timeout=5)
-            except subprocess.TimeoutExpired:
-                child.kill()
-                child.wait()
+            assert child.stdin is not None
+            child.stdin.close()
+            child.wait()
 
 
 def _command(program: str | None, port: int, folder: Path) -> tuple[str, list[str]]:
@@ -92,7 +93,7 @@ def _await(child: subprocess.Popen[bytes], port: int, name: str) -> None:
     end = time.monotonic() + WAIT_S
     while time.monotonic() < end:
         if child.poll() is not None:
-            raise BrokerError(f"{name} ended at once with status {child.returncode}; try another port")
+            raise BrokerError(f"{name} on port {port} ended at once with status {child.returncode}; try another port")
         with contextlib.suppress(OSError), socket.create_connection((HOST, port), timeout=0.2):
             return
         time.sleep(0.05)

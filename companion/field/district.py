@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from pathlib import Path
 
+from companion.book.files import FileFault
 from companion.field.fleet import Life
 
 SITE = """\
@@ -126,13 +127,25 @@ LIVES = {
 }
 
 
+def check_folder(folder: Path) -> None:
+    """Refuse a folder that holds anything but an earlier demo, so that no one's site or book is written over. FileFault."""
+    if not folder.exists():
+        return
+    if not folder.is_dir():
+        raise FileFault(f"{folder}: is a file; name a folder for the demo's files with --out")
+    site = folder / "site.toml"
+    ours = site.is_file() and site.read_bytes().startswith(SITE.partition("\n")[0].encode())
+    if not ours and any(folder.iterdir()):
+        raise FileFault(f"{folder}: holds files that are not a demo's; name a new or an empty folder with --out")
+
+
 def write_district(folder: Path, port: int, timezone: str) -> Path:
     """Write the district's site file and tables into a folder; returns the site file's path."""
     folder.mkdir(parents=True, exist_ok=True)
-    (folder / "tower.csv").write_text(_table("level [m],volume [m^3]", [(h, _spheroid(h, 7.0, 4.0)) for h in _steps(8.0, 0.2)]))
-    (folder / "vale.csv").write_text(_table("level [cm],volume [L]", [(100 * h, 1000 * _basin(h)) for h in _steps(4.6, 0.2)]))
     site = folder / "site.toml"
     site.write_text(SITE.format(port=port, timezone=timezone))
+    (folder / "tower.csv").write_text(_table("level [m],volume [m^3]", [(h, _spheroid(h, 7.0, 4.0)) for h in _steps(8.0, 0.2)]))
+    (folder / "vale.csv").write_text(_table("level [cm],volume [L]", [(100 * h, 1000 * _basin(h)) for h in _steps(4.6, 0.2)]))
     return site
 
 

@@ -2,15 +2,17 @@
 
 The network's thread queues what arrives; the writer takes what has gathered, commits it in one transaction, acknowledges it in
 the order of its arrival (never what an older connection brought: the broker will bring that again), and tells the loggers
-by a receipt what is kept. A full queue holds the network's thread back, and so the broker.
+by a receipt what is kept. A full queue holds the network's thread back, and so the broker; a book that cannot write holds
+everything back, unacknowledged, until it can.
 """
 
 from __future__ import annotations
 
+import contextlib
 import json
-import os
 import queue
 import signal
+import sqlite3
 import sys
 import threading
 import time
@@ -20,23 +22,25 @@ from pathlib import Path
 from typing import Any
 
 import paho.mqtt.client as mqtt
-from paho.mqtt.enums import CallbackAPIVersion, MQTTProtocolVersion
 
-from companion.book.store import Book, open_book
-from companion.intake.wire import Pack, WireError, decode
-from companion.settings.errors import SiteError
-from companion.settings.site import Mqtt, Site
+from companion.book.store import Added, Book, open_book
+from companion.intake.connect import client_of, connect
+from companion.intake.quarantine import Quarantine, one_line
+from companion.intake.senml import WireError
+from companion.intake.wire import Pack, decode
+from companion.settings.site import Site
 
 WAITING = 10_000  # packs in the queue at most
 TOGETHER = 2_000  # packs in one transaction at most
 RECEIPT_S = 1.0  # between two receipts of a tank at least
-LOOPBACK = ("localhost", "127.0.0.1", "::1")
+AGAIN_S = 2.0  # until a book that could not write is tried again
 
 
 @dataclass(frozen=True)
 class Message:
-    """What arrived, and on which connection."""
+    """What arrived, when [s since 1970], and on which connection."""
 
+    at: float
     connection: int
     mid: int
     qos: int
@@ -46,7 +50,7 @@ class Message:
 
 @dataclass
 class Tally:
-    """What has been done so far."""
+    """What has been done so far: packs taken, readings new and repeated, payloads quarantined."""
 
     packs: int = 0
     new: int = 0
@@ -75,91 +79,95 @@ class Listener:
         self.tally = Tally()
         self.connected = threading.Event()
         self._say = say or (lambda line: print(f"levelbook: {line}", file=sys.stderr, flush=True))
+        self._aside = Quarantine(Path(site.store_url.partition(":")[2]).with_name("quarantine.jsonl"), self._say)
         self._queue: queue.Queue[Message] = queue.Queue(WAITING)
-        self._connection = 0
+        self._connection, self._turning = 0, threading.Lock()  # a connection's number; held while it is used or changes
+        self._leaving = threading.Event()
+        self._trouble = ""
         self._owed: dict[str, dict[str, Any]] = {}
         self._sent: dict[str, float] = {}
-        self._client = _client(site, self)
+        self._client = client_of(site)
+        for name in ("on_connect", "on_connect_fail", "on_disconnect", "on_subscribe", "on_message"):
+            setattr(self._client, name, getattr(self, name))
 
     def run(self, stop: threading.Event) -> Tally:
         """Store readings until stop is set, then what has arrived by then; returns what was done."""
-        mqtt_of = self.site.mqtt
         with open_book(self.site.store_url) as book:
-            self._client.connect_async(mqtt_of.host, mqtt_of.port, keepalive=30)
-            self._client.loop_start()
+            connect(self._client, self.site)
             try:
                 while not stop.is_set():
-                    self._turn(book, 0.2)
-                while not self._queue.empty():
-                    self._turn(book, 0.0)
+                    self._turn(book, stop, 0.2)
+                for _ in range(0, self._queue.qsize(), TOGETHER):
+                    self._turn(book, stop, 0.0)
                 self._receipts(everything=True)
             finally:
+                self._leaving.set()
                 self._client.disconnect()
                 self._client.loop_stop()
         return self.tally
 
-    def _turn(self, book: Book, wait_s: float) -> None:
+    def _turn(self, book: Book, stop: threading.Event, wait_s: float) -> None:
         batch = self._gathered(wait_s)
-        if batch:
-            packs = [(message, self._decoded(message)) for message in batch]
-            good = [pack for _, pack in packs if pack is not None and len(pack.frame)]
-            added = book.add_many([(pack.tank, pack.frame) for pack in good])
-            for pack, outcome in zip(good, added, strict=True):
-                self.tally.new += outcome.new
-                self.tally.repeated += outcome.repeated
-                for row in outcome.conflicts.to_dict("records"):
-                    self._quarantine(
-                        f"levelbook/{pack.tank}/readings",
-                        json.dumps(row, default=str),
-                        "another reading of this identity is in the book",
-                    )
-                self._owe(book, pack)
-            self.tally.packs += len(batch)
-            for message in batch:
-                if message.connection == self._connection and message.qos:
-                    self._client.ack(message.mid, message.qos)
+        if batch and self._stored(book, batch, stop):
+            self._acknowledge(batch)
         self._receipts()
 
     def _gathered(self, wait_s: float) -> list[Message]:
-        try:
-            batch = [self._queue.get(timeout=wait_s) if wait_s else self._queue.get_nowait()]
-        except queue.Empty:
-            return []
-        while len(batch) < TOGETHER:
-            try:
+        batch: list[Message] = []
+        with contextlib.suppress(queue.Empty):
+            batch.append(self._queue.get(bool(wait_s), wait_s))
+            while len(batch) < TOGETHER:
                 batch.append(self._queue.get_nowait())
-            except queue.Empty:
-                break
         return batch
 
-    def _decoded(self, message: Message) -> Pack | None:
-        try:
-            pack = decode(message.topic, message.payload, self._signal)
-        except WireError as error:
-            self._quarantine(message.topic, message.payload.decode("utf-8", "backslashreplace"), str(error))
-            return None
-        for fault in pack.faults:
-            self._quarantine(message.topic, message.payload.decode("utf-8", "backslashreplace"), fault)
-        return pack
+    def _stored(self, book: Book, batch: list[Message], stop: threading.Event) -> bool:
+        """Store a batch, however long the book cannot be written; False where that lasts until stop is set."""
+        while True:
+            try:
+                self._store(book, batch)
+            except (sqlite3.OperationalError, OSError) as error:  # a full disk, a lock
+                self._troubled(f"{book.path}: the book cannot be written ({error}); readings wait unacknowledged until it can")
+                if stop.wait(AGAIN_S):
+                    return False
+            else:
+                self._trouble = ""
+                return True
+
+    def _store(self, book: Book, batch: list[Message]) -> None:
+        """Everything of a batch to where it is safe: the book, or quarantine."""
+        good: list[tuple[Message, Pack]] = []
+        bad: list[tuple[Message, list[str]]] = []
+        for message in batch:
+            try:
+                pack = decode(message.topic, message.payload, self._signal, message.at)
+            except WireError as error:
+                bad.append((message, [str(error)]))
+                continue
+            if pack.faults:
+                bad.append((message, pack.faults))
+            if len(pack.frame):
+                good.append((message, pack))
+        added = book.add_many([(pack.tank, pack.frame) for _, pack in good])
+        self.tally.packs += len(batch)
+        self.tally.new += sum(outcome.new for outcome in added)
+        self.tally.repeated += sum(outcome.repeated for outcome in added)
+        for (message, pack), outcome in zip(good, added, strict=True):
+            if len(outcome.conflicts):
+                bad.append((message, _conflicts(outcome)))
+            self._owe(book, pack)
+        for message, faults in bad:
+            more = f" (and {len(faults) - 1} more)" if len(faults) > 1 else ""
+            self._aside.keep(message.topic, message.payload, faults[0] + more)
+        self.tally.quarantined = self._aside.kept
 
     def _signal(self, tank: str) -> str | None:
         return self.site.tanks[tank].sensors[-1].signal if tank in self.site.tanks else None
 
-    def _quarantine(self, topic: str, payload: str, reason: str) -> None:
-        """Keep what cannot be taken, on the disk before it is acknowledged."""
-        self.tally.quarantined += 1
-        self._say(f"{topic}: quarantined: {reason}")
-        path = Path(self.site.store_url.partition(":")[2]).with_name("quarantine.jsonl")
-        with open(path, "a", encoding="utf-8") as file:
-            line = {
-                "time": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime()),
-                "topic": topic,
-                "reason": reason,
-                "payload": payload,
-            }
-            file.write(json.dumps(line) + "\n")
-            file.flush()
-            os.fsync(file.fileno())
+    def _acknowledge(self, batch: list[Message]) -> None:
+        with self._turning:  # a packet id of an older connection may stand for another message on this one
+            for message in batch:
+                if message.connection == self._connection and message.qos:
+                    self._client.ack(message.mid, message.qos)
 
     def _owe(self, book: Book, pack: Pack) -> None:
         if pack.life is None:
@@ -175,58 +183,59 @@ class Listener:
             self._client.publish(f"levelbook/{tank}/kept", json.dumps(self._owed.pop(tank)), qos=1, retain=True)
             self._sent[tank] = now
 
+    def _troubled(self, line: str) -> None:
+        """Say what is wrong, once and not at every trial."""
+        if line != self._trouble:
+            self._say(one_line(line))
+        self._trouble = line
+
     def on_connect(self, client: mqtt.Client, userdata: Any, flags: Any, reason: Any, properties: Any) -> None:
         """paho's: a connection stands, or was refused."""
         if reason.is_failure:
-            self._say(
-                f"broker {self.site.mqtt.host}: refused the connection ({reason}); check username and password_env in [mqtt]"
-            )
+            self._troubled(f"{self._broker}: refused the connection ({reason}); check username and password_env in [mqtt]")
             return
-        self._connection += 1
+        with self._turning:
+            self._connection += 1
         client.subscribe([(topic, 1) for topic in self.site.mqtt.topics])
 
-    def on_subscribe(self, *_: Any) -> None:
-        """paho's: the subscription stands."""
+    def on_subscribe(self, client: mqtt.Client, userdata: Any, mid: int, reasons: Any, properties: Any) -> None:
+        """paho's: the subscriptions stand, or were refused."""
+        refused = [topic for topic, reason in zip(self.site.mqtt.topics, reasons, strict=False) if reason.is_failure]
+        if refused:
+            self._troubled(f"{self._broker}: refuses {', '.join(refused)}; let this user read it, or mend topics in [mqtt]")
+            return
+        self._trouble = ""
         self.connected.set()
 
     def on_connect_fail(self, client: mqtt.Client, userdata: Any) -> None:
-        """paho's: the broker cannot be reached; paho tries again."""
-        self._say(f"broker {self.site.mqtt.host}:{self.site.mqtt.port}: cannot be reached; trying again")
+        """paho's, from where it caught the error: the broker cannot be reached; paho tries again."""
+        self._troubled(f"{self._broker}: cannot be reached ({sys.exc_info()[1]}); trying again")
+
+    def on_disconnect(self, client: mqtt.Client, userdata: Any, flags: Any, reason: Any, properties: Any) -> None:
+        """paho's: the connection is gone, and with it the right to acknowledge what it brought."""
+        with self._turning:
+            self._connection += 1
+        if not self._leaving.is_set():
+            self._troubled(f"{self._broker}: the connection is lost ({reason}); trying again")
 
     def on_message(self, client: mqtt.Client, userdata: Any, message: mqtt.MQTTMessage) -> None:
-        """paho's: a message. Waits where the queue is full."""
-        self._queue.put(Message(self._connection, message.mid, message.qos, message.topic, bytes(message.payload)))
-
-
-def _client(site: Site, listener: Listener) -> mqtt.Client:
-    of = site.mqtt
-    five = of.protocol == 5
-    client = mqtt.Client(
-        CallbackAPIVersion.VERSION2, f"levelbook-desk-{site.path.absolute().parent.name}"[:60], None if five else False,
-        protocol=MQTTProtocolVersion.MQTTv5 if five else MQTTProtocolVersion.MQTTv311, manual_ack=True)  # fmt: skip
-    _secure(client, site, of)
-    client.reconnect_delay_set(1, 30)
-    client.on_connect, client.on_message, client.on_subscribe = listener.on_connect, listener.on_message, listener.on_subscribe
-    client.on_connect_fail = listener.on_connect_fail
-    return client
-
-
-def _secure(client: mqtt.Client, site: Site, of: Mqtt) -> None:
-    if of.tls_ca is not None:
+        """paho's: a message. Waits where the queue is full, but not for a writer that has gone."""
         try:
-            client.tls_set(ca_certs=str(site.path.parent / of.tls_ca))
-        except OSError as error:
-            raise SiteError(
-                [f"{site.path}: mqtt.tls_ca: {of.tls_ca} cannot be read ({error}); name the broker's CA certificate"]
-            ) from None
-    elif of.host not in LOOPBACK:
-        raise SiteError(
-            [f"{site.path}: mqtt.tls_ca: is missing, and {of.host} is another machine; name the broker's CA certificate"]
-        )
-    if of.username is not None:
-        password = os.environ.get(of.password_env) if of.password_env else None
-        if of.password_env and password is None:
-            raise SiteError(
-                [f"{site.path}: mqtt.password_env: {of.password_env} is not set in the environment; set it to the password"]
-            )
-        client.username_pw_set(of.username, password)
+            topic = message.topic
+        except UnicodeDecodeError:  # a broker ought to refuse it: MQTT 3.1.1, 1.5.3
+            topic = "(no UTF-8)"
+        arrived = Message(time.time(), self._connection, message.mid, message.qos, topic, bytes(message.payload))
+        while not self._leaving.is_set():
+            with contextlib.suppress(queue.Full):
+                self._queue.put(arrived, timeout=0.5)
+                break
+
+    @property
+    def _broker(self) -> str:
+        return f"broker {self.site.mqtt.host}:{self.site.mqtt.port}"
+
+
+def _conflicts(outcome: Added) -> list[str]:
+    """A line a reading that says otherwise than the one of its identity in the book."""
+    rows = outcome.conflicts.to_dict("records")
+    return [f"another reading of life {row['life']}, seq {row['seq']} is in the book" for row in rows]

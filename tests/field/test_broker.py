@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+import os
 import socket
+import subprocess
+import sys
 import time
+from pathlib import Path
 
 import needs
 import paho.mqtt.client as mqtt
@@ -42,6 +46,22 @@ def test_it_is_gone_when_the_block_breaks_off() -> None:
     with pytest.raises(RuntimeError), local_broker() as broker:
         raise RuntimeError
     with pytest.raises(OSError), socket.create_connection((broker.host, broker.port), timeout=0.5):
+        pass
+
+
+@pytest.mark.parametrize("program", PROGRAMS)
+def test_it_is_gone_when_the_program_that_started_it_is_killed(program: str, tmp_path: Path) -> None:
+    needs.need(program, PROGRAMS[program])
+    code = f"import time; from companion.field.broker import local_broker as b\nwith b(program='{program}') as at: print(at.port, flush=True); time.sleep(60)"
+    environment = os.environ | {"PYTHONPATH": str(needs.ROOT), "TMPDIR": str(tmp_path)}
+    with subprocess.Popen([sys.executable, "-c", code], env=environment, stdout=subprocess.PIPE, text=True) as child:
+        port = int(child.stdout.readline())
+        child.kill()
+    end = time.monotonic() + 10
+    while list(tmp_path.iterdir()):
+        assert time.monotonic() < end, "the broker's folder is still there"
+        time.sleep(0.02)
+    with pytest.raises(OSError), socket.create_connection(("127.0.0.1", port), timeout=0.5):
         pass
 
 

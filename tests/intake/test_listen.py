@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+import base64
 import contextlib
 import json
 import os
 import signal
+import sqlite3
 import subprocess
 import sys
 import threading
@@ -19,9 +21,10 @@ import pytest
 from paho.mqtt.enums import CallbackAPIVersion
 from sites import SITE, site_of
 
-from companion.book.store import open_book
+from companion.book.store import Book, open_book
 from companion.field.broker import Broker, local_broker
-from companion.intake.listen import Listener
+from companion.intake.connect import session_name
+from companion.intake.listen import Listener, Message
 from companion.settings.errors import SiteError
 from companion.settings.site import Site
 from core_mp import senml
@@ -180,8 +183,128 @@ def test_a_broker_on_another_machine_needs_tls_and_a_password_its_variable(tmp_p
         Listener(site_of(tmp_path, SITE + '[mqtt]\nusername = "desk"\npassword_env = "NO_SUCH_VARIABLE"\n'))
 
 
-def test_mqtt_5_works_as_well(broker: Broker, tmp_path: Path) -> None:
+def test_mqtt_5_works_as_well_and_brings_what_came_while_no_one_listened(broker: Broker, tmp_path: Path) -> None:
     site = site_of(tmp_path, SITE + f"[mqtt]\nport = {broker.port}\nprotocol = 5\n")
     with listening(site), client(broker) as logger:
         logger.publish(TOPIC, payload(0, 3), qos=1)
         eventually(lambda: stored(site) == [0, 1, 2])
+    with client(broker) as logger:
+        logger.publish(TOPIC, payload(3, 2), qos=1).wait_for_publish(5)
+    with listening(site):
+        eventually(lambda: stored(site) == [0, 1, 2, 3, 4])
+
+
+def test_what_an_older_connection_brought_is_not_acknowledged(site: Site, broker: Broker, monkeypatch) -> None:
+    """The connection is lost while the writer is busy. What it stores then is acknowledged only once the broker has brought it again."""
+    writing, go = threading.Event(), threading.Event()
+    store, acknowledged = Listener._store, []
+
+    def slowly(self: Listener, book: Book, batch: list[Message]) -> None:
+        writing.set()
+        assert go.wait(10)
+        store(self, book, batch)
+
+    monkeypatch.setattr(Listener, "_store", slowly)
+    with listening(site) as listener, client(broker) as logger:
+        ack = listener._client.ack
+        listener._client.ack = lambda mid, qos: acknowledged.append(mid) or ack(mid, qos)
+        logger.publish(TOPIC, payload(0, 1), qos=1)
+        assert writing.wait(10)
+        intruder = mqtt.Client(CallbackAPIVersion.VERSION2, session_name(site), clean_session=False)
+        intruder.connect(broker.host, broker.port)  # the same name: the broker hangs up on the listener
+        eventually(lambda: listener.said)
+        go.set()
+        eventually(lambda: listener.tally.new == 1)
+        intruder.disconnect()
+        eventually(lambda: listener.tally.repeated == 1 and acknowledged)
+    assert len(acknowledged) == 1  # as it came the second time
+    assert "the connection is lost" in listener.said[0] and stored(site) == [0]
+
+
+def test_a_book_that_cannot_be_written_holds_readings_back_until_it_can(site: Site, broker: Broker, monkeypatch) -> None:
+    def impatient(url: str) -> Book:
+        book = open_book(url)
+        book._db.execute("PRAGMA busy_timeout = 50")
+        return book
+
+    monkeypatch.setattr("companion.intake.listen.open_book", impatient)
+    monkeypatch.setattr("companion.intake.listen.AGAIN_S", 0.05)
+    with listening(site) as listener, client(broker) as logger:
+        other = sqlite3.connect(site.store_url.partition(":")[2], isolation_level=None)
+        other.execute("BEGIN IMMEDIATE")
+        logger.publish(TOPIC, payload(0, 3), qos=1).wait_for_publish(5)
+        eventually(lambda: listener.said)
+        assert "the book cannot be written (database is locked)" in listener.said[0]
+        other.execute("ROLLBACK")
+        other.close()
+        eventually(lambda: stored(site) == [0, 1, 2])
+    assert len(listener.said) == 1
+
+
+def test_a_writer_that_fails_with_a_full_queue_ends_the_listener(site: Site, broker: Broker, monkeypatch) -> None:
+    monkeypatch.setattr("companion.intake.listen.WAITING", 1)
+    listener = Listener(site)
+
+    def fails(book: Book, batch: list[Message]) -> None:
+        eventually(listener._queue.full)
+        raise RuntimeError("as told")
+
+    def run() -> None:
+        with pytest.raises(RuntimeError, match="as told"):
+            listener.run(threading.Event())
+
+    listener._store = fails
+    running = threading.Thread(target=run, daemon=True)
+    running.start()
+    with client(broker) as logger:
+        assert listener.connected.wait(10)
+        for n in range(20):
+            logger.publish(TOPIC, payload(n, 1), qos=1)
+        running.join(10)
+    assert not running.is_alive()
+
+
+def test_a_pack_is_quarantined_once_however_many_faults_it_has_and_its_line_cannot_act(
+    site: Site, broker: Broker, tmp_path: Path
+) -> None:
+    other = json.loads(payload(0, 3).replace('"counts"', '"level"'))
+    with listening(site) as listener, client(broker) as logger:
+        logger.publish(TOPIC, json.dumps(other), qos=1)
+        logger.publish(TOPIC, '[{"bn":"north/","n":"\\u001b[2J\\n","v":1}]', qos=1)
+        logger.publish(TOPIC, b"\xff\x00", qos=1)
+        eventually(lambda: listener.tally.quarantined == 3)
+    kept = [json.loads(line) for line in (tmp_path / "quarantine.jsonl").read_text().splitlines()]
+    assert (
+        "sends level, the site file says counts (and 2 more)" in kept[0]["reason"] and json.loads(kept[0]["payload"]) == other
+    )
+    assert base64.b64decode(kept[2]["payload_base64"]) == b"\xff\x00"
+    assert len(listener.said) == 3 and all(line.isprintable() for line in listener.said)
+
+
+def test_another_reading_of_the_same_identity_is_quarantined_and_the_first_stays(
+    site: Site, broker: Broker, tmp_path: Path
+) -> None:
+    with listening(site) as listener, client(broker) as logger:
+        logger.publish(TOPIC, payload(0, 2), qos=1)
+        logger.publish(TOPIC, payload(0, 2).replace('"v":7001', '"v":9999'), qos=1)
+        eventually(lambda: listener.tally.quarantined == 1 and listener.tally.repeated == 1)
+    assert "another reading of life k1, seq 1 is in the book" in listener.said[0] and stored(site) == [0, 1]
+    assert "9999" in (tmp_path / "quarantine.jsonl").read_text()
+
+
+def test_a_broker_that_is_not_there_is_told_once_with_the_reason(tmp_path: Path) -> None:
+    with local_broker() as gone:
+        pass
+    listener = Listener(site_of(tmp_path, SITE + f"[mqtt]\nport = {gone.port}\n"), (said := []).append)
+    stop = threading.Event()
+    threading.Timer(2.5, stop.set).start()
+    listener.run(stop)
+    assert len(said) == 1 and "cannot be reached ([Errno" in said[0]
+
+
+def test_a_site_file_has_a_session_of_its_own(tmp_path: Path) -> None:
+    names = []
+    for folder in ("a", "b", "a"):
+        (tmp_path / folder).mkdir(exist_ok=True)
+        names.append(session_name(site_of(tmp_path / folder)))
+    assert names[0] == names[2] != names[1] and all(name.isalnum() and len(name) == 23 for name in names)

@@ -3,12 +3,16 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Iterator
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from companion.intake.wire import WireError, decode, resolve
+from companion.book.store import Book, open_book
+from companion.intake.senml import WireError, resolve
+from companion.intake.wire import decode
 
 TOPIC = "levelbook/north/readings"
 NOW = 1_770_000_000.0
@@ -25,29 +29,49 @@ def read(payload: bytes, topic: str = TOPIC):
 GOOD = ({"bn": "north/", "bt": 1767225600, "n": "counts", "v": 100}, {"n": "life", "vs": "k"}, {"n": "seq", "v": 7})
 
 
-def test_rfc_8428_multiple_datapoints_resolve_as_printed() -> None:
-    """RFC 8428, 5.1.2 and 5.1.3: the second example's pack and the resolved records printed in 5.1.4 (times from memory of the RFC)."""
-    source = pack(
-        {
-            "bn": "urn:dev:ow:10e2073a01080063:",
-            "bt": 1.276020076001e09,
-            "bu": "A",
-            "bver": 5,
-            "n": "voltage",
-            "u": "V",
-            "v": 120.1,
-        },
-        {"n": "current", "t": -5, "v": 1.2},
-        {"n": "current", "t": -4, "v": 1.3},
-        {"n": "current", "v": 1.7},
-    )
-    records = resolve(source)
-    assert [(record.name, record.unit, record.value) for record in records] == [
-        ("urn:dev:ow:10e2073a01080063:voltage", "V", 120.1), ("urn:dev:ow:10e2073a01080063:current", "A", 1.2),
-        ("urn:dev:ow:10e2073a01080063:current", "A", 1.3), ("urn:dev:ow:10e2073a01080063:current", "A", 1.7)]  # fmt: skip
-    assert [record.time for record in records] == pytest.approx(
-        [1.276020076001e9, 1.276020071001e9, 1.276020072001e9, 1.276020076001e9]
-    )
+DEVICE = "urn:dev:ow:10e2073a01080063"
+EXAMPLES = {  # RFC 8428, section 5.1, from memory of its text: the pack, and its records as (name, time, unit, value)
+    "5.1.1": (
+        [{"n": DEVICE, "u": "Cel", "v": 23.1}],
+        [(DEVICE, 0, "Cel", 23.1)],
+    ),
+    "5.1.2, first": (
+        [{"bn": DEVICE + ":", "n": "voltage", "u": "V", "v": 120.1}, {"n": "current", "u": "A", "v": 1.2}],
+        [(DEVICE + ":voltage", 0, "V", 120.1), (DEVICE + ":current", 0, "A", 1.2)],
+    ),
+    "5.1.2, second": (
+        [{"bn": DEVICE + ":", "bt": 1.276020076001e09, "bu": "A", "bver": 5, "n": "voltage", "u": "V", "v": 120.1},
+         {"n": "current", "t": -5, "v": 1.2}, {"n": "current", "t": -4, "v": 1.3}, {"n": "current", "v": 1.7}],
+        [(DEVICE + ":voltage", 1.276020076001e09, "V", 120.1), (DEVICE + ":current", 1.276020071001e09, "A", 1.2),
+         (DEVICE + ":current", 1.276020072001e09, "A", 1.3), (DEVICE + ":current", 1.276020076001e09, "A", 1.7)],
+    ),
+    "5.1.3, resolved in 5.1.4": (
+        [{"bn": DEVICE, "bt": 1.320067464e09, "bu": "%RH", "v": 20}, {"u": "lon", "v": 24.30621}, {"u": "lat", "v": 60.07965},
+         {"t": 60, "v": 20.3}, {"u": "lon", "t": 60, "v": 24.30622}, {"u": "%EL", "t": 150, "v": 98}],
+        [(DEVICE, 1.320067464e09, "%RH", 20), (DEVICE, 1.320067464e09, "lon", 24.30621), (DEVICE, 1.320067464e09, "lat", 60.07965),
+         (DEVICE, 1.320067524e09, "%RH", 20.3), (DEVICE, 1.320067524e09, "lon", 24.30622), (DEVICE, 1.320067614e09, "%EL", 98)],
+    ),
+    "5.1.5": (
+        [{"bn": DEVICE + ":", "n": "temp", "u": "Cel", "v": 23.1}, {"n": "label", "vs": "Machine Room"},
+         {"n": "open", "vb": False}, {"n": "nfc-reader", "vd": "aGkgCg"}],
+        [(DEVICE + ":temp", 0, "Cel", 23.1), (DEVICE + ":label", 0, None, "Machine Room"), (DEVICE + ":open", 0, None, False),
+         (DEVICE + ":nfc-reader", 0, None, "aGkgCg")],
+    ),
+    "5.1.6": (
+        [{"bn": "2001:db8::2/", "bt": 1.320078429e09, "n": "temperature", "u": "Cel", "v": 25.2}, {"n": "humidity", "u": "%RH", "v": 30},
+         {"bn": "2001:db8::1/", "n": "temperature", "u": "Cel", "v": 12.3}, {"n": "humidity", "u": "%RH", "v": 67}],
+        [("2001:db8::2/temperature", 1.320078429e09, "Cel", 25.2), ("2001:db8::2/humidity", 1.320078429e09, "%RH", 30),
+         ("2001:db8::1/temperature", 1.320078429e09, "Cel", 12.3), ("2001:db8::1/humidity", 1.320078429e09, "%RH", 67)],
+    ),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("section", EXAMPLES)
+def test_rfc_8428_examples_resolve_to_their_records(section: str) -> None:
+    records, resolved = EXAMPLES[section]
+    found = resolve(pack(*records))
+    assert [(record.name, record.unit, record.value) for record in found] == [(name, u, v) for name, _, u, v in resolved]
+    assert [record.time for record in found] == [pytest.approx(time, abs=1e-6) for _, time, _, _ in resolved]
 
 
 def test_rfc_8428_base_value_is_added_and_base_records_may_stand_alone() -> None:
@@ -141,6 +165,18 @@ def test_a_bad_reading_is_told(records: tuple[dict[str, object], ...], says: str
         (b'[{"bn":"north/","n":"<script>","v":1}]', "is no SenML name"),
         (b'[{"bn":"mill/","n":"counts","v":1}]', "'mill/counts' is not of tank 'north'"),
         (b'[{"bn":"north/","n":"counts","v":1},{"n":"life","vb":true}]', "life 'True' is neither"),
+        (b'[{"bn":"north/","n":"counts","v":1},{"n":"life","vs":"\\ud800"}]', "is neither text of 1 to 64 printable"),
+        (
+            b'[{"bn":"north/","n":"counts","v":1},{"n":"life","vs":"' + b"k" * 65 + b'"}]',
+            "is neither text of 1 to 64 printable",
+        ),
+        (b'[{"bn":"north/","n":"counts","v":1},{"n":"life","vs":"a"},{"n":"life","vs":"b"}]', "tells two lives"),
+        (b'[{"bn":"north/","n":"counts","v":1' + b"0" * 400 + b"}]", "is no number"),
+        (b'[{"bn":"north/","bv":1e308,"n":"counts","v":1e308}]', "record 1: v 'inf' is no number"),
+        (b'[{"bn":"north/","n":"counts","v":1},{"bv":1e308,"n":"oldest","v":1e308}]', "record 2: v 'inf' is no number"),
+        (b'[{"bn":"north/","bt":1e308,"n":"counts","v":1,"t":1e308}]', "record 1: t 'inf' is no number"),
+        (b'[{"bn":"north/","n":"temperature","u":["Cel"],"v":1}]', "is no text"),
+        (b'[{"bn":"north/","n":"life","vs":{}}]', "is no text"),
     ],
 )
 def test_a_payload_that_is_no_pack_is_refused_with_the_reason(payload: bytes, says: str) -> None:
@@ -167,11 +203,27 @@ records = st.lists(
 )
 
 
-@given(st.one_of(st.binary(max_size=200), records.map(lambda r: json.dumps(r).encode())))
-def test_no_payload_breaks_the_reader(payload: bytes) -> None:
+numbers = st.one_of(st.integers(-(10**320), 10**320), st.floats(), st.sampled_from([1e308, 10**308, 2**63, -1, True]))
+words = st.one_of(st.text(max_size=8), st.just("\ud800"), st.just("x" * 200))
+nearly = st.fixed_dictionaries(  # packs that are good but for a value or two: what gets furthest in
+    {"bn": st.just("north/"), "n": st.sampled_from(["counts", "seq", "oldest", "life", "temperature", "battery"])},
+    optional={"v": numbers, "t": numbers, "bt": st.one_of(numbers, st.just(1767225600)), "bv": numbers, "vs": words,
+              "u": st.one_of(st.sampled_from(["Cel", "V"]), words)})  # fmt: skip
+near_packs = st.lists(nearly, max_size=4).map(lambda more: json.dumps([*GOOD, *more]).encode())
+
+
+@pytest.fixture(scope="module")
+def book() -> Iterator[Book]:
+    with open_book("sqlite::memory:") as opened:
+        yield opened
+
+
+@given(st.one_of(st.binary(max_size=200), records.map(lambda r: json.dumps(r).encode()), near_packs))
+def test_no_payload_breaks_the_reader_or_the_book(book: Book, payload: bytes) -> None:
     try:
         found = read(payload)
     except WireError as error:
         assert str(error)
     else:
-        assert found.frame["raw"].notna().all() and (found.frame["seq"] >= 0).all()
+        assert np.isfinite(found.frame["raw"]).all() and (found.frame["seq"] >= 0).all()
+        book.add("north", found.frame)
