@@ -14,12 +14,13 @@ The numbers of status bits are those of status.py, whose names would cost a smal
 class Tank:
     """A tank with its sensor: where they stand, what they hold.
 
-    transmitter, table: a Transmitter (or its Line) and a StrappingTable (or its Rows). density: the liquid's, a function of temperature [degC], salinity
-    [g/kg] and gauge pressure [Pa], as density.water_density. inside: pressure [Pa, absolute] inside the sensor's reference:
-    None for a gauge sensor, 101325 for a sealed, 0 for an absolute one. height_m: of the diaphragm above tank datum.
-    floor_m: elevation of tank datum. gravity: [m/s2]. t_c: temperature [degC] where none is measured. The reference (vent
-    opening, or barometer): rise_m is the diaphragm's elevation less the reference's, standard_pa the standard atmosphere
-    there, air_per_pa the air's density [kg/m3] for each pascal (earth.py); 0 leaves the air column out.
+    transmitter, table: a Transmitter (or its Line) and a StrappingTable (or its Rows). density: the liquid's, a function of
+    temperature [degC], salinity [g/kg] and gauge pressure [Pa], as density.water_density. inside: pressure [Pa, absolute]
+    inside the sensor's reference: None for a gauge sensor, 101325 for a sealed, 0 for an absolute one. height_m: of the
+    diaphragm above tank datum. floor_m: elevation of tank datum. gravity: [m/s2]. t_c: temperature [degC] where none is
+    measured. The reference (vent opening, or barometer): rise_m is the diaphragm's elevation less the reference's,
+    standard_pa the standard atmosphere there, air_per_pa the air's density [kg/m3] for each pascal (earth.py); 0 leaves the
+    air column out.
     """
 
     def __init__(self, transmitter, table, density, inside=None, height_m=0.0, floor_m=0.0, gravity=9.80665, t_c=15.0,
@@ -43,8 +44,8 @@ class Tank:
         """One reading's figures: [status bits, pressure_pa, level_m, volume_m3, grade_m], in out where it is given.
 
         raw: what the transmitter takes. headspace_pa: gauge. None or an impossible number is missing: temperature outside
-        -5 to 95 degC, barometer outside 30 to 120 kPa. Without a level (a fault) the figures are NaN. Nothing but out is
-        allocated on a board whose floats need no heap.
+        -5 to 95 degC, barometer outside 30 to 120 kPa. Without a level (a fault) the figures are NaN. No heap is
+        needed but for out on a board whose floats need none: it works with the heap locked.
         """
         if out is None:
             out = [0] * 5

@@ -7,7 +7,6 @@ board's microsecond clock one instruction, so that ticks count instructions, wha
 
 import ast
 import io
-import shutil
 import struct
 import subprocess
 import tempfile
@@ -30,13 +29,6 @@ except BaseException as error:
 import microbit
 microbit.reset()
 """
-
-
-def present():
-    """What is missing on this machine, as a line for a skipped test; '' where the board can run."""
-    missing = [] if shutil.which("qemu-system-arm") else ["qemu-system-arm"]
-    missing += [] if FIRMWARE.exists() else ["firmware-microbit-micropython"]
-    return "install the Debian packages " + " ".join(missing) if missing else ""
 
 
 def lean(source):

@@ -14,15 +14,8 @@ from pathlib import Path
 import needs
 import pytest
 
-from companion.field.broker import Broker, local_broker
+from companion.field.broker import Broker
 from core_mp.mqtt import Client
-
-
-@pytest.fixture
-def broker() -> Iterator[Broker]:
-    needs.need("mosquitto", "Debian's mosquitto")
-    with local_broker(program="mosquitto") as running:
-        yield running
 
 
 @contextlib.contextmanager

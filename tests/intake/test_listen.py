@@ -33,13 +33,6 @@ TOPIC = "levelbook/north/readings"
 
 
 @pytest.fixture
-def broker() -> Iterator[Broker]:
-    needs.need("mosquitto", "Debian's mosquitto")
-    with local_broker(program="mosquitto") as running:
-        yield running
-
-
-@pytest.fixture
 def site(broker: Broker, tmp_path: Path) -> Site:
     return site_of(tmp_path, SITE + f'[mqtt]\nhost = "127.0.0.1"\nport = {broker.port}\n')
 
