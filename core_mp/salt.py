@@ -1,4 +1,4 @@
-"""What salt does to the density of water; density.py comes here where there is some."""
+"""What salt does to the density of water; water.py comes here where there is some."""
 
 
 def salted(fresh, t_c, salinity, squeeze):

@@ -4,9 +4,9 @@ In: level [m above tank datum]. Out: volume [m3], area [m2]. One number at a tim
 """
 
 try:
-    from core_mp.rows import Rows, at
+    from core_mp.lines import Rows
 except ImportError:  # a board whose file system has no folders
-    from rows import Rows, at
+    from lines import Rows
 
 
 class StrappingTable(Rows):
@@ -27,12 +27,18 @@ class StrappingTable(Rows):
                 raise ValueError("strapping table: row %d must be above row %d in level and in volume" % (i + 1, i))
         Rows.__init__(self, levels_m, volumes_m3)
 
+    def volume(self, level):
+        """Volume [m3] at a level [m]."""
+        line = [0] * 4
+        self.find(level, line)
+        return line[2] + level * line[3]
+
     def level(self, volume):
         """Level [m] at a volume [m3]."""
-        return at(volume, self.volumes_m3, self.levels_m, [0] * 5)
+        return StrappingTable(self.volumes_m3, self.levels_m).volume(volume)
 
     def area(self, level):
-        """Surface area [m2] at a level [m]: the slope of the line it stands on."""
-        line = [0] * 5
-        self.volume(level, line)
-        return line[4]
+        """Surface area [m2] at a level [m]: the slope of the line it stands on; outside the table, of the end row's."""
+        line = [0] * 4
+        self.find(min(max(level, self.levels_m[0]), self.levels_m[-1]), line)
+        return line[3]

@@ -15,7 +15,7 @@ class Tank:
     """A tank with its sensor: where they stand, what they hold.
 
     transmitter, table: a Transmitter (or its Line) and a StrappingTable (or its Rows). density: the liquid's, a function of
-    temperature [degC], salinity [g/kg] and gauge pressure [Pa], as density.water_density. inside: pressure [Pa, absolute]
+    temperature [degC], salinity [g/kg] and gauge pressure [Pa], as water.water_density. inside: pressure [Pa, absolute]
     inside the sensor's reference: None for a gauge sensor, 101325 for a sealed, 0 for an absolute one. height_m: of the
     diaphragm above tank datum. floor_m: elevation of tank datum. gravity: [m/s2]. t_c: temperature [degC] where none is
     measured. The reference (vent opening, or barometer): rise_m is the diaphragm's elevation less the reference's,
@@ -23,8 +23,8 @@ class Tank:
     air column out.
     """
 
-    def __init__(self, transmitter, table, density, inside=None, height_m=0.0, floor_m=0.0, gravity=9.80665, t_c=15.0,
-                 salinity=None, rise_m=0.0, standard_pa=101325.0, air_per_pa=0.0):  # fmt: skip
+    def __init__(self, transmitter, table, density, inside=None, height_m=0, floor_m=0, gravity=9.80665, t_c=15,
+                 salinity=None, rise_m=0, standard_pa=101325, air_per_pa=0):  # fmt: skip
         self.transmitter = transmitter
         self.table = table
         self.inside = inside
@@ -32,13 +32,13 @@ class Tank:
         self.floor_m = floor_m
         self.t_c = t_c
         self.standard_pa = standard_pa
-        low, high = transmitter.clear if transmitter.straight else (1, 0)
-        self._quick = (low, high, inside) + transmitter.line
-        self._line = [1, 0, 0, 0, 0]  # of the table, that the last level stood on: water moves slowly
-        self.filling = density, salinity, gravity
+        self.density = density
+        self.gravity = gravity
+        self.salinity = salinity
         self.air = air_per_pa * gravity, rise_m
-        self._warmth = None
-        self.weight = [0.0, 0.0]  # of the liquid [N/m3] at the last temperature, and what twice its mean pressure [Pa] adds
+        self.weight = [0] * 4  # see level()
+        self._t = self._b = None  # temperature and barometer that weight is of
+        self._line = [1, 0, 0, 0]  # of the table, that the last level stood on: water moves slowly
 
     def measure(self, raw, temperature_c=None, barometer_pa=None, headspace_pa=None, out=None):
         """One reading's figures: [status bits, pressure_pa, level_m, volume_m3, grade_m], in out where it is given.
@@ -49,67 +49,66 @@ class Tank:
         """
         if out is None:
             out = [0] * 5
-        out[0] = 0
-        low, high, inside, x, p, slope = self._quick
+        status = 0
+        low, high, x, p, slope = self.transmitter.line
         if low <= raw <= high:
             p += (raw - x) * slope
         else:
-            out[0] = self.transmitter.status(raw)
-            if out[0] & 515:  # LOOP_LOW, LOOP_HIGH, NO_READING
+            status = self.transmitter.status(raw)
+            if status & 515:  # LOOP_LOW, LOOP_HIGH, NO_READING
+                out[0] = status
                 out[1] = out[2] = out[3] = out[4] = float("nan")
                 return out
             p = self.transmitter.pressure(raw)
-        if temperature_c is None or temperature_c != self._warmth:
-            if temperature_c is None or not -5 <= temperature_c <= 95:
-                temperature_c = self.t_c
-                out[0] |= 128  # NO_TEMPERATURE
-            if temperature_c != self._warmth:
-                self._warmth = temperature_c
-                density, salinity, gravity = self.filling
-                self.weight[0] = gravity * density(temperature_c, salinity, 0)
-                self.weight[1] = (gravity * density(temperature_c, salinity, 1e6) - self.weight[0]) * 0.5e-6
-        if barometer_pa is None or not 30e3 <= barometer_pa <= 120e3:
+        weight = self.weight
+        if temperature_c is None or not -5 <= temperature_c <= 95:
+            temperature_c = self.t_c
+            status |= 128  # NO_TEMPERATURE
+        if temperature_c != self._t:
+            self._t = temperature_c
+            self._b = None
+            weight[0] = self.gravity * self.density(temperature_c, self.salinity, 0)
+            weight[1] = (self.gravity * self.density(temperature_c, self.salinity, 1000000) - weight[0]) * 5e-7
+        if barometer_pa is None or not 30000 <= barometer_pa <= 120000:
             barometer_pa = self.standard_pa
-            if inside is not None:
-                out[0] |= 256  # NO_BAROMETER
-        if inside is not None:
-            p += inside - barometer_pa
+            if self.inside is not None:
+                status |= 256  # NO_BAROMETER
+        if self.inside is not None:
+            p += self.inside - barometer_pa
+        if barometer_pa != self._b:
+            self._b = barometer_pa
+            air, rise = self.air
+            air *= barometer_pa
+            weight[2] = weight[0] - air
+            weight[3] = air * rise
         out[1] = p
-        level = self.level(p, barometer_pa, headspace_pa)
-        low, high, x, y, slope = self._line
-        if low < level < high:
-            out[3] = y + (level - x) * slope
-        else:
-            level = self._place(level, out)
-        out[2] = level
-        level += self.floor_m
-        out[4] = (
-            level if headspace_pa is None else level + headspace_pa / (self.weight[0] + self.weight[1] * (p + headspace_pa))
-        )
-        return out
-
-    def _place(self, level, out):
-        """The level and its volume and status bits, where it stands on another line of the table than the last."""
+        level = self.level(p, headspace_pa)
         if level <= self.height_m:
             level = self.height_m
-            out[0] |= 16  # DRY
-        if level < self.table.levels_m[0]:
-            out[0] |= 32  # BELOW_TABLE
-        elif level > self.table.levels_m[-1]:
-            out[0] |= 64  # ABOVE_TABLE
-        out[3] = self.table.volume(level, self._line)
-        self._line[0] = max(self._line[0], self.height_m)
-        return level
+            status |= 16  # DRY
+        line = self._line
+        low, high, x, slope = line
+        if not low < level < high:
+            status |= self.table.find(level, line)
+            low, high, x, slope = line
+        out[2] = level
+        out[3] = x + level * slope
+        level += self.floor_m
+        if headspace_pa is not None:
+            level += headspace_pa / (weight[0] + weight[1] * (p + headspace_pa))
+        out[4] = level
+        out[0] = status
+        return out
 
-    def level(self, p, barometer_pa, p_top=None):
-        """Level [m above tank datum] from pressures [Pa] over the reference; at height_m or below it the tank is dry."""
-        weight, more = self.weight
-        weight = weight + more * p
+    def level(self, p, p_top=None):
+        """Level [m above tank datum] from pressures [Pa] over the reference; at height_m or below it the tank is dry.
+
+        weight: of the liquid [N/m3] under no pressure, what a pascal of p adds; less the air's; the air column's [Pa].
+        """
+        weight, more, less_air, air = self.weight
         if p_top is None:
-            air, rise = self.air
-            air = air * barometer_pa
-            p = (p + air * rise) / (weight - air)
+            p = (p + air) / (less_air + more * p)
         else:
-            weight = weight + more * p_top
+            weight = weight + more * (p + p_top)
             p = (p - p_top) / weight
         return p + self.height_m

@@ -5,9 +5,9 @@ own reference], status bits (status.py). Floats or numpy arrays alike.
 """
 
 try:
-    from core_mp.line import Line
+    from core_mp.lines import Line
 except ImportError:  # a board whose file system has no folders
-    from line import Line
+    from lines import Line
 
 NE43 = (0.003600016, 0.003799984, 0.020500016, 0.020999984)  # A: fault, least measured, most measured, fault; met within 16 nA
 NO_LIMITS = (-1e30, -1e30, 1e30, 1e30)
@@ -31,16 +31,16 @@ class Transmitter(Line):
         per_ampere = (c2 - c) / (i2 - i)
         low, under, over, high = [c + (x - i) * per_ampere for x in NE43] if loop else NO_LIMITS
         least, most = counts_limits or (-1e30, 1e30)
+        under, over = max(under, least + 1), min(over, most - 1)
         self.points = [(c + (x - i) * per_ampere, p) for x, p in scale]
         (x, p), (x2, p2) = self.points[:2]
-        Line.__init__(
-            self, (max(under, least + 1), min(over, most - 1)), (low, high), (least, most), (x, p, (p2 - p) / (x2 - x))
-        )
-        self.straight = len(scale) == 2
+        x = int(x) if x == int(x) else x  # a count less a count needs no float
+        straight = over if len(scale) == 2 else min(over, x2)
+        Line.__init__(self, (under, straight, x, p, (p2 - p) / (x2 - x)), (least, low, under, over, high, most))
 
     def pressure(self, raw):
         """Pressure [Pa, over the sensor's own reference] of a raw signal, whatever status() says of it."""
-        x, p, slope = self.line
+        _, _, x, p, slope = self.line
         p = p + (raw - x) * slope
         for (x, y), (x2, y2) in zip(self.points[1:], self.points[2:]):
             turn = (y2 - y) / (x2 - x) - slope

@@ -1,15 +1,33 @@
-"""Density and vapour pressure of water, and density of other liquids: what desks and larger boards take.
+"""Density and vapour pressure of water, salt or fresh, and density of other liquids: what desks and larger boards take.
 
 In: temperature [degC, ITS-90], salinity [g/kg], pressure [Pa, gauge]. Out: density [kg/m3], pressure [Pa, absolute].
 Floats or numpy arrays alike.
 """
 
 try:
-    from core_mp.density import water_density
+    from core_mp.density import fresh_density
+    from core_mp.salt import salted
 except ImportError:  # a board whose file system has no folders
-    from density import water_density
+    from density import fresh_density
+    from salt import salted
 
-__all__ = ["liquid_density", "vapour_pressure", "water_density"]
+
+def water_density(t_c, salinity=None, pressure_pa=0.0):
+    """Density [kg/m3] of water at a temperature [degC], salinity [g/kg] and gauge pressure [Pa], to 1 MPa.
+
+    Fresh water: density.py. Salt: salt.py; None is 0.
+
+    >>> round(water_density(20.0), 4)
+    998.2067
+    >>> round(water_density(10.0, 35.0), 3)
+    1026.952
+    >>> round(water_density(4.0, 0.0, 400e3), 3)
+    1000.173
+    """
+    if salinity is None:
+        return fresh_density(t_c, None, pressure_pa)
+    fresh = fresh_density(t_c, None, 0.0)
+    return salted(fresh, t_c, salinity, fresh_density(t_c, None, pressure_pa) / fresh - 1.0)
 
 
 def liquid_density(density_kg_m3, expansion_per_k=0.0, at_c=15.0):

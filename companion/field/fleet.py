@@ -101,7 +101,7 @@ def _signal(tank: TankSettings, period: Period, core: Tank, level: Column, tempe
     sensor = period.sensor
     if sensor.signal == "level":
         return level
-    gravity = core.filling[2]
+    gravity = core.gravity
     air_weight_per_pa, rise = core.air
     air = barometer * air_weight_per_pa / gravity
     head = np.maximum(level - sensor.height_m, 0.0)

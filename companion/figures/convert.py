@@ -73,7 +73,7 @@ def _by_period(tank: TankSettings, times: pd.Series) -> Iterator[tuple[Period, s
 
 def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temperature: Column, barometer: Column,
              headspace: Column | None, status: npt.NDArray[np.int64], out: dict[str, Column]) -> None:  # fmt: skip
-    low, high = core.transmitter.clear
+    low, high = core.transmitter.line[:2]
     if not low <= raw.min() <= raw.max() <= high:
         status |= core.transmitter.status(raw)
     if period.sensor.signal == "level":
@@ -88,10 +88,11 @@ def _figures(tank: TankSettings, period: Period, core: Tank, raw: Column, temper
             p += core.inside - air
         if headspace is not None:
             status |= np.isnan(headspace) * bits.NO_READING
-        density, salinity, gravity = core.filling
-        weight = gravity * density(t, salinity, 0.5 * (p if headspace is None else p + headspace))
-        core.weight = [weight, 0.0]  # type: ignore[list-item]  # a column where a logger has a number
-        level = core.level(p, air, headspace)
+        weight = core.gravity * core.density(t, core.salinity, 0.5 * (p if headspace is None else p + headspace))
+        per_pa, rise = core.air
+        of_air = per_pa * air
+        core.weight = [weight, 0.0, weight - of_air, of_air * rise]  # type: ignore[list-item]  # columns for numbers
+        level = core.level(p, headspace)
         if not level.min() > core.height_m:
             dry = level <= core.height_m
             status |= dry * bits.DRY

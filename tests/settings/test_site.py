@@ -38,9 +38,9 @@ def test_a_good_file_is_read_in_si(tmp_path: Path) -> None:
 def test_the_core_gets_gravity_and_air_of_the_place(tmp_path: Path) -> None:
     tank = site_of(tmp_path).tank("north")
     core = tank.core(tank.periods()[0])
-    assert core.filling[2] == normal_gravity(52.0, 105.0)
+    assert core.gravity == normal_gravity(52.0, 105.0)
     assert core.standard_pa == standard_pressure(110.0)
-    assert core.air == (pytest.approx(air_density(1.0, standard_temperature(110.0)) * core.filling[2]), pytest.approx(-9.9))
+    assert core.air == (pytest.approx(air_density(1.0, standard_temperature(110.0)) * core.gravity), pytest.approx(-9.9))
 
 
 def test_without_a_reference_elevation_the_air_column_is_left_out_whole(tmp_path: Path) -> None:
