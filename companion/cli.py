@@ -114,6 +114,26 @@ def _parser() -> argparse.ArgumentParser:
     span(sub, "T")
     output(sub, "picture: .png, .svg or .pdf", None)
     site(add("listen", _listen, "readings from MQTT into the book, until stopped", "site.toml"))
+    sub = tank(add("pack", _pack, "a logger's bundle for a tank", "site.toml north -o north-logger --main main.py"))
+    output(sub, "folder for the bundle; one that is there is replaced", None)
+    sub.add_argument("--main", type=Path, metavar="FILE", help="the program that the board runs, like those of examples/boards")
+    sub.add_argument(
+        "--error",
+        metavar="E",
+        help='how far the thinned table may be off, like "5 L" or "0.02 %%" of the full tank (the default)',
+    )
+    sub.add_argument("--micropython", metavar="V", help="compile for the board's MicroPython, like 1.22 (default: the newest)")
+    sub.add_argument("--arch", metavar="A", help="the board's architecture, as mpy-cross names it, like xtensawin or armv6m")
+    sub = add("flash", _flash, "a bundle onto a board, proved there; its spool stays", "north-logger /dev/ttyACM0")
+    sub.add_argument("folder", type=Path, metavar="DIR", help="a bundle, as levelbook pack makes it")
+    sub.add_argument("port", metavar="PORT", help="the board's serial port, like /dev/ttyACM0 or COM5")
+    sub = tank(
+        add("send", _send, "settings and calibration to a logger in the field", 'site.toml north --every "30 s" --wait 600')
+    )
+    for name, help in (("every", "between readings"), ("report", "between reports")):
+        sub.add_argument(f"--{name}", metavar="TIME", help=f'{help}, like "60 s" or "5 min"')
+    sub.add_argument("--fast", metavar="LENGTH", help='a change of level that is reported at once, like "5 cm"')
+    sub.add_argument("--wait", type=float, default=0.0, metavar="SECONDS", help="wait so long for the logger's answer")
     return parser
 
 
@@ -216,6 +236,49 @@ def _listen(args: argparse.Namespace) -> int:
     from companion.intake.listen import listen
 
     return listen(_site(args))
+
+
+def _pack(args: argparse.Namespace) -> int:
+    from companion.field.pack import pack
+
+    site, tank = _site(args), _tank(args)
+    full = float(tank.periods()[-1].strapping.volumes_m3[-1])
+    most = None
+    if args.error is not None:
+        share = "%" in args.error
+        most = _read(args.error, "share" if share else "volume", "--error") * (full if share else 1.0)
+        if most < 0:
+            raise WrongUse(f"--error {args.error}: must be 0 or more")
+    options = [*(["-c", args.micropython] if args.micropython else []), *([f"-march={args.arch}"] if args.arch else [])]
+    print("\n".join(pack(site, tank, Path(args.output), args.main, most, options).lines()))
+    return 0
+
+
+def _flash(args: argparse.Namespace) -> int:
+    from companion.field.flash import flash
+
+    written = flash(args.folder, args.port, lambda line: print(line, file=sys.stderr))
+    print(f"{args.port}: {written} files written, all proved by their hashes; spool, settings and secrets are as they were")
+    return 0
+
+
+def _send(args: argparse.Namespace) -> int:
+    from companion.field.send import message, send
+
+    site, tank = _site(args), _tank(args)
+    told = {"every_s": (args.every, "time"), "report_s": (args.report, "time"), "fast_m": (args.fast, "length")}
+    changed = {name: _read(text, kind, name) for name, (text, kind) in told.items() if text is not None}
+    print(send(site, tank.name, message(site, tank.name, **changed), args.wait))
+    return 0
+
+
+def _read(text: str, dimension: str, option: str) -> float:
+    from companion.units import QuantityError, read
+
+    try:
+        return read(text, dimension)
+    except QuantityError as error:
+        raise WrongUse(f"{option}: {error}") from None
 
 
 def _site(args: argparse.Namespace) -> Site:

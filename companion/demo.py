@@ -135,7 +135,7 @@ def _district(out: Path, port: int) -> tuple[Site, dict[str, pd.DataFrame], date
         history.append((name, readings[past]))
         fleet[name] = readings[~past]
     with open_book(site.store_url) as book:
-        book.add_many(history)
+        book.add_many([(tank, frame, True) for tank, frame in history])
     return site, fleet, today
 
 

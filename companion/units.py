@@ -28,6 +28,7 @@ DIMENSIONS = {
     "salinity": ("g/kg", "g/kg"),
     "share": ("", "%"),
     "drift": ("1/year", "% / year"),
+    "time": ("s", "s"),
 }  # what is asked for: the SI unit, a unit to propose
 
 WATER = {

@@ -24,6 +24,8 @@ class Client:
         self._socket = None
         self._id = 0
         self._came = []
+        self._topic = self._head = None  # the last one published on, and as it is sent
+        self._out, self._one = bytearray(256), bytearray(1)
 
     def connect(self):
         """Connect anew. OSError where the broker cannot be reached, refuses or does not answer."""
@@ -34,7 +36,8 @@ class Client:
             s.connect(socket.getaddrinfo(*self._address)[0][-1])
             if self._tls:
                 s = self._tls.wrap_socket(s, server_hostname=self._address[0])
-            self._socket = s
+            # MicroPython's sockets are streams, its TLS sockets nothing else; CPython's plain ones are none
+            self._read, self._write = (s.readinto, s.write) if hasattr(s, "readinto") else (s.recv_into, s.send)
             flags = 2
             body = _text(self._name)
             if self._will:
@@ -44,14 +47,14 @@ class Client:
                 if word is not None:
                     flags |= bit
                     body += _text(word)
-            self._send(0x10, _text("MQTT") + bytes([4, flags]) + struct.pack(">H", self._keepalive_s) + body)
+            self._send(0x10, b"\0\4MQTT\4" + bytes([flags]) + struct.pack(">H", self._keepalive_s), body)
             kind, answer = self._packet()
+            if kind != 0x20 or answer[1:] != b"\0":
+                raise OSError("broker refused the connection: %s" % answer[1:])
+            self._socket = s
         except OSError:
-            self.close()
+            s.close()
             raise
-        if kind != 0x20 or len(answer) != 2 or answer[1]:
-            self.close()
-            raise OSError("broker refused the connection, code %d" % answer[-1])
 
     def close(self):
         """Close the connection, if there is one; without a word, so that the broker publishes the will."""
@@ -60,103 +63,114 @@ class Client:
         if s:
             s.close()
 
+    def leave(self):
+        """End the connection in order, so that the broker does not publish the will."""
+        if self._socket:
+            try:
+                self._send(0xE0, b"")
+            except OSError:
+                pass
+        self.close()
+
     def subscribe(self, topic):
         """Subscribe to a topic; what comes is handed out by messages()."""
-        self._await(0x82, 0x90, _text(topic) + b"\x01")
+        self._ask(0x82, 0x90, bytearray(2), _text(topic) + b"\x01")
 
     def publish(self, topic, payload, retain=False):
-        """Publish at QoS 1, and wait for the broker's word that it came."""
-        self._await(0x33 if retain else 0x32, 0x40, payload.encode(), _text(topic))
+        """Publish text or bytes at QoS 1, and wait for the broker's word that it came."""
+        if topic != self._topic:
+            self._topic, self._head = topic, bytearray(_text(topic) + b"\0\0")
+        self._ask(0x33 if retain else 0x32, 0x40, self._head, payload.encode() if isinstance(payload, str) else payload)
 
     def ping(self):
         """Say that the logger is there, and hear that the broker is."""
-        self._turn(lambda: self._send(0xC0, b""), lambda kind, body: kind == 0xD0)
+        self._ask(0xC0, 0xD0)
 
     def messages(self, wait_ms=0):
         """(topic, payload) pairs that came, after waiting for the first of them so long at most."""
-        self._guard(self._collect, wait_ms)
+        if not self._socket:
+            raise OSError("not connected")
+        poll = select.poll()
+        poll.register(self._socket, select.POLLIN)
+        try:
+            while poll.poll(wait_ms):
+                self._packet()
+                wait_ms = 0
+        except OSError:
+            self.close()
+            raise
         came, self._came = self._came, []
         return came
 
-    def _await(self, kind, answer, tail, head=b""):
-        self._id = self._id % 65535 + 1  # never 0
-        number = struct.pack(">H", self._id)
-        self._turn(lambda: self._send(kind, head + number + tail), lambda k, body: k & 0xF0 == answer and body[:2] == number)
-
-    def _turn(self, send, done):
-        self._guard(self._exchange, send, done)
-
-    def _exchange(self, send, done):
-        send()
-        for _ in range(100):  # what else may come before the answer
-            kind, body = self._packet()
-            if done(kind, body):
-                return
-        raise OSError("no answer from the broker")
-
-    def _collect(self, wait_ms):
-        poll = select.poll()
-        poll.register(self._socket, select.POLLIN)
-        while poll.poll(wait_ms):
-            self._packet()
-            wait_ms = 0
-
-    def _guard(self, work, *what):
+    def _ask(self, kind, answer, head=b"", tail=b""):
+        """Send a packet, and take in what comes until its answer. At the end of a head stands the packet's id, and in the answer."""
         if not self._socket:
             raise OSError("not connected")
+        if head:
+            self._id = self._id % 65535 + 1  # never 0
+            head[-2], head[-1] = self._id >> 8, self._id & 255
         try:
-            work(*what)
+            self._send(kind, head, tail)
+            for _ in range(100):  # what else may come before the answer
+                kind, body = self._packet()
+                if kind & 0xF0 == answer and body[:2] == head[-2:]:
+                    return
+            raise OSError("no answer from the broker")
         except OSError:
             self.close()
             raise
 
-    def _send(self, kind, body):
-        n = len(body)
-        head = bytearray([kind])
-        while True:
-            head.append(n & 127 | (128 if n > 127 else 0))
+    def _send(self, kind, start, rest=b""):
+        """Write a packet whose body is start and rest."""
+        out, n, i = self._out, len(start) + len(rest), 1
+        out[0] = kind
+        while n > 127:
+            out[i] = n & 127 | 128
             n >>= 7
-            if not n:
-                break
-        data = memoryview(bytes(head) + body)
+            i += 1
+        out[i] = n
+        n = i + 1 + len(start)
+        out[i + 1 : n] = start
+        self._all(memoryview(out)[:n])
+        self._all(rest)
+
+    def _all(self, data):
         while data:
-            n = self._socket.send(data)
+            n = self._write(data)
             if not n:
                 raise OSError("connection closed")
-            data = data[n:]
+            data = memoryview(data)[n:] if n < len(data) else b""
 
     def _packet(self):
         """The next packet: (kind, body). A message is acknowledged and put aside."""
-        kind = self._take(1)[0]
+        one = self._one
+        self._fill(one)
+        kind = one[0]
         size = shift = 0
-        while True:
-            byte = self._take(1)[0]
-            size |= (byte & 127) << shift
+        one[0] = 128
+        while one[0] & 128:
+            self._fill(one)
+            size |= (one[0] & 127) << shift
             shift += 7
-            if byte < 128:
-                break
-            if shift > 21:
-                raise OSError("malformed packet")
-        if size > 4096:
-            raise OSError("packet of %d bytes" % size)
-        body = self._take(size)
+            if size > 4096 or shift > 28:
+                raise OSError("malformed packet, or one of more than 4096 bytes")
+        body = bytearray(size)
+        self._fill(body)
         if kind & 0xF0 == 0x30:
             n = 2 + struct.unpack(">H", body[:2])[0]
-            topic = body[2:n].decode()
+            topic = bytes(body[2:n]).decode()
             if kind & 6:
                 self._send(0x40, body[n : n + 2])
                 n += 2
-            self._came.append((topic, body[n:]))
+            self._came.append((topic, bytes(body[n:])))
         return kind, body
 
-    def _take(self, n):
-        data = b""
-        while len(data) < n:
-            more = self._socket.recv(n - len(data))
-            if not more:
+    def _fill(self, data):
+        while data:
+            n = self._read(data)
+            if not n:
                 raise OSError("connection closed")
-            data += more
-        return data
+            data = memoryview(data)[n:] if n < len(data) else b""
 
 
 def _text(word):

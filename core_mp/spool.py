@@ -14,10 +14,12 @@ import struct
 
 SIZE = 32
 _HEADER = "<4s8sIII4xI"  # mark, life, turn (counts up), first seq, dropped so far, CRC
-_RECORD = "<IIifffHHI"  # seq, time [s], raw, temperature [degC], barometer [Pa], headspace [Pa], battery [mV], kind, CRC
+_RECORD = "<IIifffHH"  # seq, time [s], raw, temperature [degC], barometer [Pa], headspace [Pa], battery [mV], kind; then CRC
 _MARK = b"LVB1"
 _MISSING = 0xFFFF  # mV
-_FLOAT, _NOTE = 1, 2  # kinds: raw is a float's bits; no reading, but how many are dropped once the other file is begun anew
+_WHOLE = 0x2144DF1C  # the CRC-32 of anything with its own CRC-32 behind it
+_FLOAT, _NOTE, _RECKONED = 1, 2, 4  # kinds: raw is a float's bits; no reading, but how many are dropped once the other file is
+#   begun anew; the time is the logger's own reckoning
 _NAN = float("nan")
 
 
@@ -26,7 +28,7 @@ class Spool:
 
     life: up to 8 letters and digits for a new spool; drawn by chance where not given.
     Attributes: life, next_seq, oldest (the lowest seq without receipt; next_seq where there is none), dropped (readings that
-    had to go unreceipted, ever).
+    had to go unreceipted, ever), last_time (of the last reading that stood here when it began; 0 where there is none).
     """
 
     def __init__(self, folder, records=4096, life=None):
@@ -36,10 +38,11 @@ class Spool:
         self._tried = None
         self._mount(life)
 
-    def add(self, time_s, raw, temperature_c=None, barometer_pa=None, headspace_pa=None, battery_v=None):
+    def add(self, time_s, raw, temperature_c=None, barometer_pa=None, headspace_pa=None, battery_v=None, known=True):
         """Keep a reading; returns its seq when it is on the flash. OSError where it is not: add it again, or go on without it.
 
-        time_s: whole seconds since 1970, UTC. raw: a whole number to 32 bits, or a float, kept to 32 bits. The others may be None.
+        time_s: whole seconds since 1970, UTC; where that is not known, by the logger's own reckoning. raw: a whole number to 32
+        bits, or a float, kept to 32 bits. The others may be None.
         """
         if self._doubt:
             self._mount()
@@ -51,7 +54,19 @@ class Spool:
         bits = raw if isinstance(raw, int) else struct.unpack("<i", struct.pack("<f", raw))[0]
         t, b, h = [_NAN if value is None else value for value in (temperature_c, barometer_pa, headspace_pa)]
         battery = _MISSING if battery_v is None or battery_v != battery_v else min(_MISSING - 1, int(battery_v * 1000 + 0.5))
-        struct.pack_into(_RECORD, self._buffer, 0, seq, time_s, bits, t, b, h, battery, 0 if bits is raw else _FLOAT, 0)
+        struct.pack_into(
+            _RECORD,
+            self._buffer,
+            0,
+            seq,
+            time_s,
+            bits,
+            t,
+            b,
+            h,
+            battery,
+            (0 if bits is raw else _FLOAT) | (0 if known else _RECKONED),
+        )
         self._tried = (seq, time_s, raw)
         self._append(self._file, "ab")
         self._used += 1
@@ -63,23 +78,29 @@ class Spool:
         if life == self.life and seq >= self.oldest:
             self.oldest = min(seq + 1, self.next_seq)
 
-    def waiting(self, most):
-        """The oldest readings without receipt, so many at most, as senml.pack takes them."""
-        out = []
+    def waiting(self, after=-1):
+        """The readings without receipt, and after a seq, in order: what senml takes, and whether the time is known.
+
+        Where it goes on after what it handed out last, it does not look for the place.
+        """
+        after = max(after, self.oldest - 1)
+        place = self._place
         for file in (1 - self._file, self._file):
-            if self._turns[file] and (file == self._file or self.oldest < self._firsts[self._file]):
-                for reading in self._read(file, self._from[file]):
-                    if reading[0] < self.oldest:
+            if self._turns[file] and (file == self._file or after + 1 < self._firsts[self._file]):
+                start = self._from[file]
+                if place[1] == self._turns[file] and place[0] <= after:
+                    start = max(start, place[2])
+                for seq in self._seqs(file, start):
+                    if seq < self.oldest:
                         self._from[file] = self._here
-                    else:
-                        out.append(reading)
-                        if len(out) == most:
-                            return out
-        return out
+                    elif seq > after:
+                        place[0], place[1], place[2] = seq, self._turns[file], self._here
+                        yield self._reading()
 
     def _mount(self, life=None):
         """Find out from the files what stands in them; without any, begin."""
         self._turns, self._firsts, self._from = [0, 0], [0, 0], [SIZE, SIZE]
+        self._place = [0, 0, 0]  # after what was handed out last: its seq, its file's turn, the place in it
         self._note = None
         self._damaged = 0
         self.life = None
@@ -96,17 +117,20 @@ class Spool:
         self._file = 0 if self._turns[0] > self._turns[1] else 1
         self._used = self._slots(self._file)
         self._last = self._note = None
+        self.last_time = 0
         self.oldest = self.next_seq = self._firsts[self._file]
-        for last in self._read(self._file, SIZE):
-            self._last = last
-            self.next_seq = last[0] + 1
+        for seq in self._seqs(self._file):
+            self._last = self._reading()
+            self.next_seq = seq + 1
+            self.last_time = self._last[1]
         # readings that were sent may have stood in slots that are no longer whole: their seqs are not given again
         self.next_seq += self._damaged + (self._here - self._end) // SIZE
         if self._note is not None:  # the cut came between the note and the other file's beginning
             self.dropped, self._turns[1 - self._file] = self._note, 0
         elif self._turns[1 - self._file]:
-            for reading in self._read(1 - self._file, SIZE):
-                self.oldest = min(self.oldest, reading[0])
+            for seq in self._seqs(1 - self._file):
+                self.oldest = min(self.oldest, seq)
+                self.last_time = max(self.last_time, self._reading()[1])
         self._doubt = False
 
     def _look(self, file):
@@ -128,8 +152,8 @@ class Spool:
         first = None
         count = 0
         try:
-            for reading in self._read(file, SIZE):
-                first = reading[0] if first is None else first
+            for seq in self._seqs(file):
+                first = seq if first is None else first
                 count += 1
         except OSError:
             return
@@ -151,34 +175,42 @@ class Spool:
                 f.write(b"\xff" * (SIZE - size % SIZE))
         return (size + SIZE - 1) // SIZE - 1
 
-    def _read(self, file, start):
-        """The readings of a file, in order, from a place on; _here is how far it came, _end the place after the last whole record."""
+    def _seqs(self, file, start=SIZE):
+        """The seqs of a file's whole records, in order, from a place on; the record is in the buffer. _here is how far it came, _end
+        the place after the last whole record.
+        """
+        record = self._buffer
         with open(self._paths[file], "rb") as f:
             f.seek(start)
             self._here = self._end = start
-            while f.readinto(self._buffer) == SIZE:
+            while f.readinto(record) == SIZE:
                 self._here += SIZE
-                if not self._whole():
-                    continue
-                self._end = self._here
-                seq, time_s, raw, t, b, h, battery, kind, _ = struct.unpack_from(_RECORD, self._buffer)
-                if kind & _NOTE:
-                    self._note = time_s
-                    continue
-                if kind & _FLOAT:
-                    raw = struct.unpack("<f", struct.pack("<i", raw))[0]
-                t, b, h = [None if value != value else value for value in (t, b, h)]
-                yield seq, time_s, raw, t, b, h, None if battery == _MISSING else battery / 1000
+                if self._whole():
+                    self._end = self._here
+                    if record[26] & _NOTE:
+                        self._note = struct.unpack_from("<I", record, 4)[0]
+                    else:
+                        yield record[0] | record[1] << 8 | record[2] << 16 | record[3] << 24
+
+    def _reading(self):
+        """The reading in the buffer."""
+        seq, time_s, raw, t, b, h, battery, kind = struct.unpack_from(_RECORD, self._buffer)
+        if kind & _FLOAT:
+            raw = struct.unpack_from("<f", self._buffer, 8)[0]
+        t = t if t == t else None
+        b = b if b == b else None
+        h = h if h == h else None
+        return seq, time_s, raw, t, b, h, None if battery == _MISSING else battery / 1000, not kind & _RECKONED
 
     def _turn(self):
         """Begin the other file anew, and go on in it."""
         other = 1 - self._file
         lost = 0
         if self._turns[other] and self.oldest < self._firsts[self._file]:
-            for reading in self._read(other, SIZE):
-                lost += reading[0] >= self.oldest
+            for seq in self._seqs(other):
+                lost += seq >= self.oldest
         if lost:
-            struct.pack_into(_RECORD, self._buffer, 0, self.next_seq, self.dropped + lost, 0, 0, 0, 0, 0, _NOTE, 0)
+            struct.pack_into(_RECORD, self._buffer, 0, self.next_seq, self.dropped + lost, 0, 0, 0, 0, 0, _NOTE)
             self._append(self._file, "ab")
             self.dropped += lost
             self._turns[other] = 0
@@ -202,5 +234,4 @@ class Spool:
         self._doubt = False
 
     def _whole(self):
-        (crc,) = struct.unpack_from("<I", self._buffer, SIZE - 4)
-        return crc == binascii.crc32(memoryview(self._buffer)[: SIZE - 4]) & 0xFFFFFFFF
+        return binascii.crc32(self._buffer) & 0xFFFFFFFF == _WHOLE

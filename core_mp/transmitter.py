@@ -13,7 +13,25 @@ NE43 = (0.003600016, 0.003799984, 0.020500016, 0.020999984)  # A: fault, least m
 NO_LIMITS = (-1e30, -1e30, 1e30, 1e30)
 
 
-class Transmitter(Line):
+class Bent(Line):
+    """A sensor's line that may bend: line and limits as Line has them, points: two or more (raw, pressure [Pa]), both rising."""
+
+    def __init__(self, line, limits, points):
+        Line.__init__(self, line, limits)
+        self.points = points
+
+    def pressure(self, raw):
+        """Pressure [Pa, over the sensor's own reference] of a raw signal, whatever status() says of it."""
+        _, _, x, p, slope = self.line
+        p = p + (raw - x) * slope
+        for (x, y), (x2, y2) in zip(self.points[1:], self.points[2:]):
+            turn = (y2 - y) / (x2 - x) - slope
+            p = p + (raw > x) * (raw - x) * turn
+            slope += turn
+        return p
+
+
+class Transmitter(Bent):
     """A pressure transmitter, as its data sheet and its calibration tell it.
 
     scale: two or more (signal, pressure [Pa]) points, both rising, straight lines between them and beyond.
@@ -32,18 +50,8 @@ class Transmitter(Line):
         low, under, over, high = [c + (x - i) * per_ampere for x in NE43] if loop else NO_LIMITS
         least, most = counts_limits or (-1e30, 1e30)
         under, over = max(under, least + 1), min(over, most - 1)
-        self.points = [(c + (x - i) * per_ampere, p) for x, p in scale]
-        (x, p), (x2, p2) = self.points[:2]
+        points = [(c + (x - i) * per_ampere, p) for x, p in scale]
+        (x, p), (x2, p2) = points[:2]
         x = int(x) if x == int(x) else x  # a count less a count needs no float
         straight = over if len(scale) == 2 else min(over, x2)
-        Line.__init__(self, (under, straight, x, p, (p2 - p) / (x2 - x)), (least, low, under, over, high, most))
-
-    def pressure(self, raw):
-        """Pressure [Pa, over the sensor's own reference] of a raw signal, whatever status() says of it."""
-        _, _, x, p, slope = self.line
-        p = p + (raw - x) * slope
-        for (x, y), (x2, y2) in zip(self.points[1:], self.points[2:]):
-            turn = (y2 - y) / (x2 - x) - slope
-            p = p + (raw > x) * (raw - x) * turn
-            slope += turn
-        return p
+        Bent.__init__(self, (under, straight, x, p, (p2 - p) / (x2 - x)), (least, low, under, over, high, most), points)

@@ -15,7 +15,12 @@ settings.register_profile("house", deadline=None, derandomize=bool(os.environ.ge
 settings.register_profile("long", deadline=None, max_examples=3000)
 settings.load_profile(os.environ.get("HYPOTHESIS_PROFILE", "house"))
 
-collect_ignore = ["core_mp/field_day.py", "core_mp/power_cuts.py"]  # MicroPython runs them
+collect_ignore = [
+    "core_mp/field_day.py",
+    "core_mp/hundred_days.py",
+    "core_mp/power_cuts.py",
+    "field/raw_repl.py",
+]  # MicroPython runs them
 
 
 @pytest.fixture

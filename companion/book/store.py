@@ -98,13 +98,17 @@ class Book:
 
     def add(self, tank: str, frame: pd.DataFrame) -> Added:
         """Store a frame of readings of a tank; committed on return."""
-        return self.add_many([(tank, frame)])[0]
+        return self.add_many([(tank, frame, True)])[0]
 
-    def add_many(self, batch: Sequence[tuple[str, pd.DataFrame]]) -> list[Added]:
-        """Store frames of readings of several tanks in one transaction; all are committed on return, or none."""
+    def add_many(self, batch: Sequence[tuple[str, pd.DataFrame, bool]]) -> list[Added]:
+        """Store frames of readings of several tanks in one transaction; all are committed on return, or none.
+
+        The third says whether the times are the logger's own: where they are told from the arrival, because it has no clock,
+        the first time told stays, and another is no conflict.
+        """
         self._db.execute("BEGIN IMMEDIATE")
         try:
-            added = [self._add(tank, frame) for tank, frame in batch]
+            added = [self._add(*one) for one in batch]
             self._db.execute("COMMIT")
         except BaseException:
             self._db.execute("ROLLBACK")
@@ -112,7 +116,7 @@ class Book:
             raise
         return added
 
-    def _add(self, tank: str, frame: pd.DataFrame) -> Added:
+    def _add(self, tank: str, frame: pd.DataFrame, timed: bool) -> Added:
         lives = {life: self._id(life) for life in frame["life"].unique()}
         columns = [frame["life"].map(lives).tolist(), frame["seq"].tolist(), _microseconds(frame["time"])]
         columns += [_nullable(frame[name]) for name in COLUMNS[1:6]]
@@ -125,7 +129,7 @@ class Book:
         new = db.execute(
             "INSERT OR IGNORE INTO reading SELECT ?, life, seq, time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, ?"
             " FROM temp.incoming ORDER BY row", (where, arrived)).rowcount  # fmt: skip
-        other = " OR ".join(f"i.{name} IS NOT r.{name}" for name in CONTENT)
+        other = " OR ".join(f"i.{name} IS NOT r.{name}" for name in (CONTENT if timed else CONTENT[1:]))
         rows = db.execute(
             f"SELECT i.row FROM temp.incoming i JOIN reading r ON r.tank = ? AND r.life = i.life AND r.seq = i.seq WHERE {other}",
             (where,)).fetchall() if new < len(frame) else []  # fmt: skip

@@ -25,7 +25,7 @@ def client_of(site: Site) -> mqtt.Client:
     client = mqtt.Client(
         CallbackAPIVersion.VERSION2, session_name(site), None if five else False,
         protocol=MQTTProtocolVersion.MQTTv5 if five else MQTTProtocolVersion.MQTTv311, manual_ack=True)  # fmt: skip
-    _secure(client, site)
+    secure(client, site)
     client.reconnect_delay_set(1, 30)
     return client
 
@@ -51,7 +51,8 @@ def session_name(site: Site) -> str:
     return "levelbook" + hashlib.sha256(where.encode("utf-8", "surrogateescape")).hexdigest()[:14]
 
 
-def _secure(client: mqtt.Client, site: Site) -> None:
+def secure(client: mqtt.Client, site: Site) -> None:
+    """Give a client the site's CA, user and password. SiteError where a connection would stand in the clear."""
     of = site.mqtt
     if of.tls_ca is not None:
         try:

@@ -86,6 +86,7 @@ class Listener:
         self._trouble = ""
         self._owed: dict[str, dict[str, Any]] = {}
         self._sent: dict[str, float] = {}
+        self._said: dict[str, dict[str, Any]] = {}  # what loggers say of themselves
         self._client = client_of(site)
         for name in ("on_connect", "on_connect_fail", "on_disconnect", "on_subscribe", "on_message"):
             setattr(self._client, name, getattr(self, name))
@@ -143,11 +144,12 @@ class Listener:
             except WireError as error:
                 bad.append((message, [str(error)]))
                 continue
+            self._heard(pack)
             if pack.faults:
                 bad.append((message, pack.faults))
             if len(pack.frame):
                 good.append((message, pack))
-        added = book.add_many([(pack.tank, pack.frame) for _, pack in good])
+        added = book.add_many([(pack.tank, pack.frame, not pack.relative) for _, pack in good])
         self.tally.packs += len(batch)
         self.tally.new += sum(outcome.new for outcome in added)
         self.tally.repeated += sum(outcome.repeated for outcome in added)
@@ -159,6 +161,14 @@ class Listener:
             more = f" (and {len(faults) - 1} more)" if len(faults) > 1 else ""
             self._aside.keep(message.topic, message.payload, faults[0] + more)
         self.tally.quarantined = self._aside.kept
+
+    def _heard(self, pack: Pack) -> None:
+        """Say what a logger says of itself, where it is trouble that was not told yet."""
+        before, now = self._said.get(pack.tank, {}), pack.said
+        told = [f"{name} {now[name]}" for name in now if name != "settings" and now[name] not in (0, before.get(name, 0))]
+        if told:
+            self._say(one_line(f"{pack.tank}: its logger says: {', '.join(told)}"))
+        self._said[pack.tank] = before | now
 
     def _signal(self, tank: str) -> str | None:
         return self.site.tanks[tank].sensors[-1].signal if tank in self.site.tanks else None

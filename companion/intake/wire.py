@@ -13,7 +13,7 @@ import math
 import re
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import pandas as pd
@@ -28,18 +28,26 @@ UNITS = {"counts": None, "current": "A", "voltage": "V", "pressure": "Pa", "leve
          "barometer": "Pa", "headspace": "Pa", "battery": "V", "seq": None}  # fmt: skip
 PLACES = {"temperature": "temperature_c", "barometer": "barometer_pa", "headspace": "headspace_pa", "battery": "battery_v"}
 SIGNALS = ("counts", "current", "voltage", "pressure", "level")
+LOGGER = re.compile(r"life|oldest|dropped|settings|refused|faults:[a-z]+")  # what a logger says of itself, not of a reading
 NO_LIFE = "wire"  # of a logger that says neither life nor seq: its seq is the time in microseconds
 
 
 @dataclass(frozen=True)
 class Pack:
-    """A tank's readings from the wire. life as it came (text or number), None where none; oldest: seq the spool still holds."""
+    """A tank's readings from the wire. life as it came (text or number), None where none; oldest: seq the spool still holds.
+
+    relative: the logger has no clock, so the times are told from the arrival, and said again they differ. said: what the logger
+    says of itself: dropped (readings that went unreceipted), settings (version in use), refused (why the desk's last settings
+    were), faults:sensor and the like (how often).
+    """
 
     tank: str
     frame: pd.DataFrame
     life: str | int | None
     oldest: int | None
     faults: list[str]
+    relative: bool = False
+    said: dict[str, Any] = field(default_factory=dict)
 
 
 def decode(topic: str, payload: bytes, signal_of: Callable[[str], str | None], now: float | None = None) -> Pack:
@@ -56,15 +64,18 @@ def decode(topic: str, payload: bytes, signal_of: Callable[[str], str | None], n
     if strange is not None:
         raise WireError(f"'{strange[:80]}' is not of tank '{tank}', whose topic it came on")
     arrived = time.time() if now is None else now
-    life = _life([record.value for record in records if record.name == f"{tank}/life"])
-    oldest = next((record.value for record in reversed(records) if record.name == f"{tank}/oldest"), None)
+    told = [(record.name[len(tank) + 1 :], record) for record in records]
+    life = _life([record.value for name, record in told if name == "life"])
+    said = {name: record.value for name, record in told if LOGGER.fullmatch(name) and name != "life"}
     rows, faults = [], []
-    for group in _readings(records, len(tank) + 1):
+    relative = False
+    for group in _readings(told):
+        relative |= next(iter(group.values())).time < RELATIVE
         try:
             rows.append(_row(group, signal, NO_LIFE if life is None else str(life), arrived))
         except ValueError as fault:
             faults.append(str(fault))
-    return Pack(tank, _frame(rows), life, _whole(oldest), faults)
+    return Pack(tank, _frame(rows), life, _whole(said.pop("oldest", None)), faults, relative, said)
 
 
 def _life(told: list[Any]) -> str | int | None:
@@ -79,12 +90,11 @@ def _life(told: list[Any]) -> str | int | None:
     return life
 
 
-def _readings(records: list[Record], prefix: int) -> list[dict[str, Record]]:
+def _readings(told: list[tuple[str, Record]]) -> list[dict[str, Record]]:
     """Records of one reading together: those of one time, until a name comes again."""
     groups: list[dict[str, Record]] = []
-    for record in records:
-        name = record.name[prefix:]
-        if name in ("life", "oldest"):
+    for name, record in told:
+        if LOGGER.fullmatch(name):
             continue
         if not groups or name in groups[-1] or next(iter(groups[-1].values())).time != record.time:
             groups.append({})

