@@ -134,6 +134,19 @@ def _parser() -> argparse.ArgumentParser:
         sub.add_argument(f"--{name}", metavar="TIME", help=f'{help}, like "60 s" or "5 min"')
     sub.add_argument("--fast", metavar="LENGTH", help='a change of level that is reported at once, like "5 cm"')
     sub.add_argument("--wait", type=float, default=0.0, metavar="SECONDS", help="wait so long for the logger's answer")
+    sub = site(
+        add("quarantine", _quarantine, "what came and could not be taken: list it, try it again, drop it", "site.toml list")
+    )
+    sub.add_argument(
+        "what",
+        choices=("list", "retry", "drop"),
+        help="list: what is there and why; retry: after mending the site file; drop: for good",
+    )
+    sub.add_argument(
+        "ids", nargs="*", type=int, metavar="ID", help="only these, by the numbers that list shows (drop wants at least one)"
+    )
+    sub = site(add("gaps", _gaps, "readings that loggers took and the book does not have", "site.toml"))
+    sub.add_argument("--tank", metavar="T", action="append", help="only this tank; may be given again")
     return parser
 
 
@@ -236,6 +249,39 @@ def _listen(args: argparse.Namespace) -> int:
     from companion.intake.listen import listen
 
     return listen(_site(args))
+
+
+def _quarantine(args: argparse.Namespace) -> int:
+    from companion.book.store import open_book
+    from companion.intake.quarantine import one_line, retry
+
+    site = _site(args)
+    with open_book(site.store_url, create=False) as book:
+        if args.what == "retry":
+            tried = retry(site, book, args.ids)
+            print(f"{tried.readings} new readings; {tried.refused} payloads are still refused")
+            return int(tried.refused > 0)
+        if args.what == "drop":
+            if not args.ids:
+                raise WrongUse("quarantine drop: name what to drop by the numbers that levelbook quarantine SITE list shows")
+            with book.change():
+                print(f"{book.aside.drop(args.ids)} payloads dropped")
+            return 0
+        for entry in book.aside.entries(args.ids):
+            times = f", {entry.times} times" if entry.times > 1 else ""
+            print(one_line(f"{entry.id}  {entry.arrived:%Y-%m-%dT%H:%M:%SZ}  {entry.topic}{times}: {entry.reason}"))
+    return 0
+
+
+def _gaps(args: argparse.Namespace) -> int:
+    from companion.book.store import open_book
+
+    site = _site(args)
+    wanted = [_known(site, name).name for name in args.tank] if args.tank else list(site.tanks)
+    with open_book(site.store_url, create=False) as book:
+        found = [gap for gap in book.gaps() if gap.tank in wanted]
+    print("\n".join(gap.line() for gap in found) or "no reading is missing")
+    return int(bool(found))
 
 
 def _pack(args: argparse.Namespace) -> int:

@@ -134,8 +134,9 @@ def _district(out: Path, port: int) -> tuple[Site, dict[str, pd.DataFrame], date
         past = readings["time"] < pd.Timestamp(today)
         history.append((name, readings[past]))
         fleet[name] = readings[~past]
-    with open_book(site.store_url) as book:
-        book.add_many([(tank, frame, True) for tank, frame in history])
+    with open_book(site.store_url) as book, book.change():
+        for name, frame in history:
+            book.put(name, frame)
     return site, fleet, today
 
 

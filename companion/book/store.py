@@ -7,35 +7,25 @@ One process writes, others read without being blocked (WAL); a commit is on the 
 
 from __future__ import annotations
 
+import contextlib
 import sqlite3
-from collections.abc import Sequence
+from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from types import TracebackType
+from typing import Any
 
 import numpy as np
 import pandas as pd
 
+from companion.book.aside import Aside
+from companion.book.gaps import Gap, gaps, hear
 from companion.book.readings import COLUMNS, empty_frame, frame_of
+from companion.book.schema import VERSION, upgrade
 
-VERSION = 1
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 CONTENT = ("time_us", "raw", "temperature_c", "barometer_pa", "headspace_pa", "battery_v")
-
-SCHEMA = """
-CREATE TABLE name (id INTEGER PRIMARY KEY, word TEXT NOT NULL UNIQUE);
-CREATE TABLE reading (
-    tank INTEGER NOT NULL REFERENCES name, life INTEGER NOT NULL REFERENCES name, seq INTEGER NOT NULL,
-    time_us INTEGER NOT NULL, raw REAL, temperature_c REAL, barometer_pa REAL, headspace_pa REAL, battery_v REAL,
-    arrived_us INTEGER NOT NULL,
-    PRIMARY KEY (tank, life, seq)) WITHOUT ROWID;
-CREATE INDEX reading_by_time ON reading (tank, time_us);
-"""
-INCOMING = """
-CREATE TEMP TABLE IF NOT EXISTS incoming (life INTEGER, seq INTEGER, time_us INTEGER, raw REAL, temperature_c REAL,
-    barometer_pa REAL, headspace_pa REAL, battery_v REAL, row INTEGER);
-"""
 
 
 class BookError(Exception):
@@ -73,50 +63,38 @@ class Book:
             self._db = sqlite3.connect(path, timeout=30.0, isolation_level=None)
             self._db.execute("PRAGMA journal_mode = WAL")
             self._db.execute("PRAGMA synchronous = FULL")
-            self._make()
+            version = upgrade(self._db)
         except sqlite3.DatabaseError as error:
             raise BookError(f"{path}: cannot be used as a book ({error}); name another file in [store] url") from None
+        if version > VERSION:
+            raise BookError(f"{path}: a book of version {version}, this levelbook reads version {VERSION}; upgrade levelbook")
         self._ids: dict[str, int] = {}
+        self.aside = Aside(self._db, self._id)
         self._whole: dict[tuple[str, str], int] = {}
 
-    def _make(self) -> None:
-        if self._db.execute("PRAGMA user_version").fetchone()[0] == 0:
-            self._db.execute("BEGIN IMMEDIATE")
-            try:
-                if self._db.execute("PRAGMA user_version").fetchone()[0] == 0:  # another process may have been first
-                    for statement in SCHEMA.split(";"):
-                        self._db.execute(statement)
-                    self._db.execute(f"PRAGMA user_version = {VERSION}")
-            finally:
-                self._db.execute("COMMIT")
-        version = self._db.execute("PRAGMA user_version").fetchone()[0]
-        if version != VERSION:
-            raise BookError(
-                f"{self.path}: a book of version {version}, this levelbook reads version {VERSION}; upgrade levelbook"
-            )
-        self._db.execute(INCOMING)
-
-    def add(self, tank: str, frame: pd.DataFrame) -> Added:
-        """Store a frame of readings of a tank; committed on return."""
-        return self.add_many([(tank, frame, True)])[0]
-
-    def add_many(self, batch: Sequence[tuple[str, pd.DataFrame, bool]]) -> list[Added]:
-        """Store frames of readings of several tanks in one transaction; all are committed on return, or none.
-
-        The third says whether the times are the logger's own: where they are told from the arrival, because it has no clock,
-        the first time told stays, and another is no conflict.
-        """
+    @contextlib.contextmanager
+    def change(self) -> Iterator[None]:
+        """One transaction: what is put and kept in the block is committed when it ends, or nothing of it."""
         self._db.execute("BEGIN IMMEDIATE")
         try:
-            added = [self._add(*one) for one in batch]
+            yield
             self._db.execute("COMMIT")
         except BaseException:
             self._db.execute("ROLLBACK")
             self._ids.clear()
             raise
-        return added
 
-    def _add(self, tank: str, frame: pd.DataFrame, timed: bool) -> Added:
+    def add(self, tank: str, frame: pd.DataFrame) -> Added:
+        """Store a frame of readings of a tank; committed on return."""
+        with self.change():
+            return self.put(tank, frame)
+
+    def put(self, tank: str, frame: pd.DataFrame, timed: bool = True) -> Added:
+        """Store a frame of readings of a tank, within change().
+
+        timed: the times are the logger's own; where they are told from the arrival, because it has no clock, the first time told
+        stays, and another is no conflict.
+        """
         lives = {life: self._id(life) for life in frame["life"].unique()}
         columns = [frame["life"].map(lives).tolist(), frame["seq"].tolist(), _microseconds(frame["time"])]
         columns += [_nullable(frame[name]) for name in COLUMNS[1:6]]
@@ -161,8 +139,16 @@ class Book:
         rows = self._db.execute("SELECT word FROM name WHERE id IN (SELECT DISTINCT tank FROM reading) ORDER BY word")
         return [word for (word,) in rows]
 
+    def hear(self, tank: str, life: str, oldest: int | None, said: dict[str, Any], at: float) -> None:
+        """Note what a logger says of itself, within change(): the lowest seq it still holds, its troubles."""
+        hear(self._db, self._id(tank), self._id(life), oldest, said, at)
+
+    def gaps(self) -> list[Gap]:
+        """Readings that are missing, by tank and time."""
+        return gaps(self._db)
+
     def kept(self, tank: str, life: str, oldest: int | None = None) -> int | None:
-        """The highest seq of a life up to which every reading that still existed is stored; None where that is none.
+        """The highest seq of a life up to which every reading that still existed is stored or in quarantine; None where that is none.
 
         oldest: the lowest seq that the logger's spool still holds; what is missing below it is gone and no hole.
         """
@@ -172,20 +158,20 @@ class Book:
             return None
         seq = self._whole.get(key)
         if seq is None or (oldest is not None and oldest - 1 > seq):
-            low = self._db.execute(
-                "SELECT min(seq) FROM reading WHERE tank = ? AND life = ? AND seq >= ?", (*ids, oldest or 0)
-            ).fetchone()[0]
+            low = min((first for (first,) in self._seqs(ids, "min(seq)", oldest or 0) if first is not None), default=None)
             if low is None or (oldest is not None and low > oldest):
                 return seq
             seq = low
-        for (stored,) in self._db.execute(
-            "SELECT seq FROM reading WHERE tank = ? AND life = ? AND seq > ? ORDER BY seq", (*ids, seq)
-        ):
+        for (stored,) in self._seqs(ids, "seq", seq + 1):
             if stored != seq + 1:
                 break
             seq = stored
         self._whole[key] = seq
         return seq
+
+    def _seqs(self, ids: list[int | None], what: str, least: int) -> sqlite3.Cursor:
+        of = f"SELECT {what} AS seq FROM {{}} WHERE tank = ? AND life = ? AND seq >= ?"
+        return self._db.execute(f"{of.format('reading')} UNION {of.format('refused')} ORDER BY 1", (*ids, least, *ids, least))
 
     def _id(self, word: str) -> int:
         known = self._known(word)

@@ -48,7 +48,7 @@ def send(site: Site, tank: str, payload: bytes, wait_s: float = 0.0) -> str:
 
     def on_message(client: mqtt.Client, userdata: Any, heard: mqtt.MQTTMessage) -> None:
         try:
-            said = decode(heard.topic, bytes(heard.payload), lambda name: site.tank(name).sensors[-1].signal).said
+            said = decode(heard.topic, bytes(heard.payload), site.signal).said
         except (WireError, SiteError):
             return
         if said.get("settings") == version:

@@ -18,14 +18,14 @@ import threading
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import paho.mqtt.client as mqtt
 
-from companion.book.store import Added, Book, open_book
+from companion.book.aside import Refused
+from companion.book.store import Book, open_book
 from companion.intake.connect import client_of, connect
-from companion.intake.quarantine import Quarantine, one_line
+from companion.intake.quarantine import conflict, one_line, told
 from companion.intake.senml import WireError
 from companion.intake.wire import Pack, decode
 from companion.settings.site import Site
@@ -79,7 +79,6 @@ class Listener:
         self.tally = Tally()
         self.connected = threading.Event()
         self._say = say or (lambda line: print(f"levelbook: {line}", file=sys.stderr, flush=True))
-        self._aside = Quarantine(Path(site.store_url.partition(":")[2]).with_name("quarantine.jsonl"), self._say)
         self._queue: queue.Queue[Message] = queue.Queue(WAITING)
         self._connection, self._turning = 0, threading.Lock()  # a connection's number; held while it is used or changes
         self._leaving = threading.Event()
@@ -136,31 +135,38 @@ class Listener:
 
     def _store(self, book: Book, batch: list[Message]) -> None:
         """Everything of a batch to where it is safe: the book, or quarantine."""
-        good: list[tuple[Message, Pack]] = []
-        bad: list[tuple[Message, list[str]]] = []
+        packs: list[tuple[Message, Pack]] = []
+        bad: list[Refused] = []
         for message in batch:
             try:
-                pack = decode(message.topic, message.payload, self._signal, message.at)
+                packs.append((message, decode(message.topic, message.payload, self.site.signal, message.at)))
             except WireError as error:
-                bad.append((message, [str(error)]))
-                continue
+                bad.append(Refused(message.topic, message.payload, str(error), message.at))
+        new = repeated = 0
+        with book.change():
+            for message, pack in packs:
+                faults = pack.faults
+                if len(pack.frame):
+                    added = book.put(pack.tank, pack.frame, not pack.relative)
+                    new, repeated = new + added.new, repeated + added.repeated
+                    if len(added.conflicts):
+                        faults = [*faults, conflict(pack, added.conflicts["seq"].tolist())]
+                if faults:
+                    bad.append(_refused(message, pack, faults))
+                if pack.life is not None:
+                    book.hear(pack.tank, str(pack.life), pack.oldest, pack.said, message.at)
+            book.aside.keep(bad)
+        self.tally = Tally(
+            self.tally.packs + len(batch),
+            self.tally.new + new,
+            self.tally.repeated + repeated,
+            self.tally.quarantined + len(bad),
+        )
+        for refused in bad:
+            self._say(one_line(f"{refused.topic}: quarantined: {refused.reason}"))
+        for _, pack in packs:
             self._heard(pack)
-            if pack.faults:
-                bad.append((message, pack.faults))
-            if len(pack.frame):
-                good.append((message, pack))
-        added = book.add_many([(pack.tank, pack.frame, not pack.relative) for _, pack in good])
-        self.tally.packs += len(batch)
-        self.tally.new += sum(outcome.new for outcome in added)
-        self.tally.repeated += sum(outcome.repeated for outcome in added)
-        for (message, pack), outcome in zip(good, added, strict=True):
-            if len(outcome.conflicts):
-                bad.append((message, _conflicts(outcome)))
             self._owe(book, pack)
-        for message, faults in bad:
-            more = f" (and {len(faults) - 1} more)" if len(faults) > 1 else ""
-            self._aside.keep(message.topic, message.payload, faults[0] + more)
-        self.tally.quarantined = self._aside.kept
 
     def _heard(self, pack: Pack) -> None:
         """Say what a logger says of itself, where it is trouble that was not told yet."""
@@ -169,9 +175,6 @@ class Listener:
         if told:
             self._say(one_line(f"{pack.tank}: its logger says: {', '.join(told)}"))
         self._said[pack.tank] = before | now
-
-    def _signal(self, tank: str) -> str | None:
-        return self.site.tanks[tank].sensors[-1].signal if tank in self.site.tanks else None
 
     def _acknowledge(self, batch: list[Message]) -> None:
         with self._turning:  # a packet id of an older connection may stand for another message on this one
@@ -245,7 +248,7 @@ class Listener:
         return f"broker {self.site.mqtt.host}:{self.site.mqtt.port}"
 
 
-def _conflicts(outcome: Added) -> list[str]:
-    """A line a reading that says otherwise than the one of its identity in the book."""
-    rows = outcome.conflicts.to_dict("records")
-    return [f"another reading of life {row['life']}, seq {row['seq']} is in the book" for row in rows]
+def _refused(message: Message, pack: Pack, faults: list[str]) -> Refused:
+    """A pack to be kept aside, with the identities of its readings that are refused."""
+    life = None if pack.life is None else str(pack.life)
+    return Refused(message.topic, message.payload, told(faults), message.at, pack.tank, life, pack.refused)

@@ -1,34 +1,56 @@
-"""What cannot be taken, kept aside in a file beside the book: topic, time, reason and the payload as it came."""
+"""What cannot be taken, for people: a line of a log, and another try once the site file is mended."""
 
 from __future__ import annotations
 
-import base64
-import json
-import os
-import time
-from collections.abc import Callable
-from pathlib import Path
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from companion.book.store import Book
+from companion.intake.senml import WireError
+from companion.intake.wire import Pack, decode
+from companion.settings.site import Site
 
 LONGEST = 300  # letters of a line for people
 
 
-class Quarantine:
-    """A file of one JSON object a line. say: where a line for people goes. kept: payloads put here so far."""
+@dataclass(frozen=True)
+class Tried:
+    """What became of payloads that were tried again: readings new in the book, payloads still refused."""
 
-    def __init__(self, path: Path, say: Callable[[str], None]) -> None:
-        self.path = path
-        self.kept = 0
-        self._say = say
+    readings: int
+    refused: int
 
-    def keep(self, topic: str, payload: bytes, reason: str) -> None:
-        """Keep a payload, on the disk when this returns, and say so in one line. OSError."""
-        line = {"time": time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime()), "topic": topic, "reason": reason} | _text(payload)
-        with open(self.path, "a", encoding="ascii") as file:
-            file.write(json.dumps(line) + "\n")
-            file.flush()
-            os.fsync(file.fileno())
-        self.kept += 1
-        self._say(one_line(f"{topic}: quarantined: {reason}"))
+
+def retry(site: Site, book: Book, ids: Sequence[int] = ()) -> Tried:
+    """Try payloads in quarantine again, all or those of some ids. What is good now is stored; one that is good as a whole is gone."""
+    readings = refused = 0
+    for entry in book.aside.entries(ids):
+        with book.change():
+            try:
+                pack = decode(entry.topic, entry.payload, site.signal, entry.arrived.timestamp())
+            except WireError as error:
+                book.aside.reason(entry.id, str(error))
+                refused += 1
+                continue
+            added = book.put(pack.tank, pack.frame, not pack.relative) if len(pack.frame) else None
+            readings += added.new if added else 0
+            faults = pack.faults + ([conflict(pack, added.conflicts["seq"].tolist())] if added and len(added.conflicts) else [])
+            if faults:
+                book.aside.reason(entry.id, told(faults))
+                refused += 1
+            else:
+                book.aside.drop([entry.id])
+    return Tried(readings, refused)
+
+
+def conflict(pack: Pack, seqs: Sequence[int]) -> str:
+    """Why readings of a pack are refused whose identities the book has with other content."""
+    return f"another reading of life {pack.frame['life'].iloc[0]}, seq {', '.join(map(str, seqs[:5]))} is in the book"
+
+
+def told(faults: Sequence[str]) -> str:
+    """The first of some faults, and how many more there are."""
+    return faults[0] + (f" (and {len(faults) - 1} more)" if len(faults) > 1 else "")
 
 
 def one_line(text: str) -> str:
@@ -39,10 +61,3 @@ def one_line(text: str) -> str:
     """
     plain = "".join(letter if letter.isprintable() else letter.encode("unicode_escape").decode() for letter in text[:LONGEST])
     return plain if len(text) <= LONGEST else plain + " ..."
-
-
-def _text(payload: bytes) -> dict[str, str]:
-    try:
-        return {"payload": payload.decode("utf-8")}
-    except UnicodeDecodeError:
-        return {"payload_base64": base64.b64encode(payload).decode()}

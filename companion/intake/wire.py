@@ -1,8 +1,8 @@
 """The wire: a topic and a SenML pack (RFC 8428, JSON) to readings.
 
-    pack = decode("levelbook/north/readings", payload, signal_of)
+    pack = decode("levelbook/north/readings", payload, site.signal)
 
-signal_of gives a tank's raw signal (counts, current, voltage, pressure, level), None for a tank it does not know. A pack
+site.signal gives what a tank's logger sends at a time (counts, current, voltage, pressure, level), None for a tank it does not know. A pack
 that is no SenML, or is of another tank than its topic, raises WireError; of a pack with good and bad readings the good
 ones are taken and the bad ones told in faults.
 """
@@ -29,6 +29,8 @@ UNITS = {"counts": None, "current": "A", "voltage": "V", "pressure": "Pa", "leve
 PLACES = {"temperature": "temperature_c", "barometer": "barometer_pa", "headspace": "headspace_pa", "battery": "battery_v"}
 SIGNALS = ("counts", "current", "voltage", "pressure", "level")
 LOGGER = re.compile(r"life|oldest|dropped|settings|refused|faults:[a-z]+")  # what a logger says of itself, not of a reading
+EARLIEST = 1420070400.0  # 2015-01-01: an earlier time comes from a clock that was lost
+AHEAD_S = 3600.0  # a later time than the arrival's by more than this comes from a wrong clock
 NO_LIFE = "wire"  # of a logger that says neither life nor seq: its seq is the time in microseconds
 
 
@@ -36,6 +38,7 @@ NO_LIFE = "wire"  # of a logger that says neither life nor seq: its seq is the t
 class Pack:
     """A tank's readings from the wire. life as it came (text or number), None where none; oldest: seq the spool still holds.
 
+    refused: seqs of its readings that are told in faults, where they could be read.
     relative: the logger has no clock, so the times are told from the arrival, and said again they differ. said: what the logger
     says of itself: dropped (readings that went unreceipted), settings (version in use), refused (why the desk's last settings
     were), faults:sensor and the like (how often).
@@ -46,36 +49,38 @@ class Pack:
     life: str | int | None
     oldest: int | None
     faults: list[str]
+    refused: tuple[int, ...] = ()
     relative: bool = False
     said: dict[str, Any] = field(default_factory=dict)
 
 
-def decode(topic: str, payload: bytes, signal_of: Callable[[str], str | None], now: float | None = None) -> Pack:
+def decode(topic: str, payload: bytes, signal_of: Callable[[str, float], str | None], now: float | None = None) -> Pack:
     """The readings of a pack. now: time of arrival [s since 1970], the clock's where not given. WireError."""
     match = TOPIC.fullmatch(topic)
     if match is None:
         raise WireError(f"topic '{topic[:80]}' is not levelbook/<tank>/readings")
     tank = match[1]
-    signal = signal_of(tank)
-    if signal is None:
+    arrived = time.time() if now is None else now
+    if signal_of(tank, arrived) is None:
         raise WireError(f"there is no tank '{tank}' in the site file")
     records = resolve(payload)
     strange = next((record.name for record in records if not record.name.startswith(f"{tank}/")), None)
     if strange is not None:
         raise WireError(f"'{strange[:80]}' is not of tank '{tank}', whose topic it came on")
-    arrived = time.time() if now is None else now
     told = [(record.name[len(tank) + 1 :], record) for record in records]
     life = _life([record.value for name, record in told if name == "life"])
     said = {name: record.value for name, record in told if LOGGER.fullmatch(name) and name != "life"}
-    rows, faults = [], []
+    rows, faults, refused = [], [], []
     relative = False
     for group in _readings(told):
         relative |= next(iter(group.values())).time < RELATIVE
         try:
-            rows.append(_row(group, signal, NO_LIFE if life is None else str(life), arrived))
+            rows.append(_row(tank, group, signal_of, NO_LIFE if life is None else str(life), arrived))
         except ValueError as fault:
             faults.append(str(fault))
-    return Pack(tank, _frame(rows), life, _whole(said.pop("oldest", None)), faults, relative, said)
+            refused.append(_whole(group["seq"].value) if "seq" in group else None)
+    return Pack(tank, _frame(rows), life, _whole(said.pop("oldest", None)), faults,
+                tuple(seq for seq in refused if seq is not None), relative, said)  # fmt: skip
 
 
 def _life(told: list[Any]) -> str | int | None:
@@ -102,10 +107,20 @@ def _readings(told: list[tuple[str, Record]]) -> list[dict[str, Record]]:
     return groups
 
 
-def _row(group: dict[str, Record], signal: str, life: str, arrived: float) -> dict[str, Any]:
+def _row(
+    tank: str, group: dict[str, Record], signal_of: Callable[[str, float], str | None], life: str, arrived: float
+) -> dict[str, Any]:
     when = next(iter(group.values())).time
     when = when if when >= RELATIVE else arrived + when
     told = f"reading of {when:.0f}"
+    if not when >= EARLIEST:
+        raise ValueError(f"{told}: the time is before 2015, so the logger's clock was lost")
+    if when > arrived + AHEAD_S:
+        raise ValueError(
+            f"{told}: the time is {(when - arrived) / 3600:.0f} h after its arrival, so the logger's clock is wrong"
+        )
+    signal = signal_of(tank, when)
+    assert signal is not None
     for name, record in group.items():
         if name not in UNITS:
             raise ValueError(f"{told}: '{name[:40]}' is no name known here; known are {', '.join(UNITS)}")
@@ -116,8 +131,6 @@ def _row(group: dict[str, Record], signal: str, life: str, arrived: float) -> di
     if signal not in group:
         sent = [name for name in SIGNALS if name in group]
         raise ValueError(f"{told}: sends {sent[0] if sent else 'no raw signal'}, the site file says {signal}")
-    if not 946684800.0 <= when <= 4102444800.0:
-        raise ValueError(f"{told}: the time is before 2000 or after 2100")
     microseconds = round(when * 1e6)
     seq = _whole(group["seq"].value) if "seq" in group else microseconds
     if seq is None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 import tomllib
 from dataclasses import dataclass, field
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 from zoneinfo import ZoneInfo
@@ -58,6 +59,10 @@ class Site:
     tanks: dict[str, TankSettings]
     zones: dict[str, Zone] = field(default_factory=dict)
     wire: dict[str, Any] = field(default_factory=dict)
+
+    def signal(self, name: str, at_s: float) -> str | None:
+        """What a tank's logger sends at a time [s since 1970]; None where there is no such tank."""
+        return self.tanks[name].sensor_at(datetime.fromtimestamp(at_s, UTC)).signal if name in self.tanks else None
 
     def tank(self, name: str) -> TankSettings:
         """The tank of a name; SiteError that lists the names where there is none."""

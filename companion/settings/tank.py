@@ -98,6 +98,10 @@ class TankSettings:
             for start, end in zip(edges[:-1], edges[1:], strict=True)
         ]
 
+    def sensor_at(self, moment: datetime) -> Sensor:
+        """The sensor in force at a moment."""
+        return _in_force(self.sensors, moment)
+
     def core(self, period: Period) -> Tank:
         """The tank as core_mp takes it, for one period, everything that stays the same worked out."""
         sensor, table = period.sensor, period.strapping

@@ -61,7 +61,9 @@ def test_a_contradiction_inside_one_pack_is_a_conflict_too(book: Book) -> None:
 
 
 def test_tanks_and_lives_do_not_mix(book: Book) -> None:
-    book.add_many([("north", some(0, 5), True), ("south", some(0, 5), True), ("north", some(0, 5, life="b2"), True)])
+    with book.change():
+        for tank, frame in (("north", some(0, 5)), ("south", some(0, 5)), ("north", some(0, 5, life="b2"))):
+            book.put(tank, frame)
     assert book.tanks() == ["north", "south"]
     assert len(book.readings("north")) == 10 and len(book.readings("south")) == 5
     assert book.readings("nowhere").empty and book.last("nowhere").empty

@@ -99,7 +99,7 @@ class Bench:
     def packs(self) -> list[Pack]:
         sent = [(topic, payload) for topic, payload in self.link.said if topic.endswith("/readings")]
         assert all(len(payload) <= 1024 for _, payload in sent)
-        packs = [decode(topic, payload, lambda tank: "counts", NOW + self.ms // 1000) for topic, payload in sent]
+        packs = [decode(topic, payload, lambda tank, when: "counts", NOW + self.ms // 1000) for topic, payload in sent]
         assert not [pack.faults for pack in packs if pack.faults]
         return packs
 

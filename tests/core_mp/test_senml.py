@@ -55,7 +55,7 @@ reading = st.tuples(
 @given(st.lists(reading, min_size=1, max_size=30, unique_by=lambda r: r[0]))
 def test_what_is_packed_is_read_back(rows: list[tuple[float, ...]]) -> None:
     rows = [(n, 1_700_000_000 + sum(r[1] % 500 for r in rows[: n + 1]), *r[2:]) for n, r in enumerate(rows)]
-    pack = decode("levelbook/t1/readings", senml.pack("t1", "counts", "a", 0, rows).encode(), lambda tank: "counts")
+    pack = decode("levelbook/t1/readings", senml.pack("t1", "counts", "a", 0, rows).encode(), lambda tank, when: "counts")
     assert not pack.faults and pack.life == "a" and pack.oldest == 0
     for row, back in zip(rows, pack.frame.to_dict("records"), strict=True):
         found = (

@@ -119,7 +119,7 @@ def test_values_survive_to_the_book_as_they_were(tmp_path: Path) -> None:
     spool.add(1767225600, -(2**31), 9.5, 98012.0, 150.0, 3.612)
     spool.add(1767225660, 0.0123)
     text = senml.pack("north", "counts", spool.life, spool.oldest, list(spool.waiting()))
-    frame = decode("levelbook/north/readings", text.encode(), lambda tank: "counts").frame
+    frame = decode("levelbook/north/readings", text.encode(), lambda tank, when: "counts").frame
     assert frame["raw"].tolist() == [-(2.0**31), pytest.approx(0.0123, rel=1e-7)]
     assert frame[["temperature_c", "barometer_pa", "headspace_pa", "battery_v"]].iloc[0].tolist() == [
         9.5,

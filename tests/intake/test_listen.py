@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import base64
 import contextlib
 import json
 import os
@@ -21,6 +20,7 @@ import pytest
 from paho.mqtt.enums import CallbackAPIVersion
 from sites import SITE, site_of
 
+from companion.book.aside import Entry
 from companion.book.store import Book, open_book
 from companion.field.broker import Broker, local_broker
 from companion.intake.connect import session_name
@@ -87,6 +87,11 @@ def stored(site: Site) -> list[int]:
         return book.readings("north")["seq"].tolist()
 
 
+def quarantined(site: Site) -> list[Entry]:
+    with open_book(site.store_url) as book:
+        return book.aside.entries()
+
+
 def test_readings_reach_the_book_and_a_retained_receipt_comes_back(site: Site, broker: Broker) -> None:
     receipts: list[dict[str, object]] = []
     with listening(site), client(broker) as logger:
@@ -120,9 +125,9 @@ def test_what_is_no_pack_is_kept_aside_with_its_reason_and_the_rest_goes_on(site
         logger.publish("levelbook/nowhere/readings", payload(0, 1), qos=1)
         logger.publish(TOPIC, payload(0, 1), qos=1)
         eventually(lambda: stored(site) == [0] and listener.tally.quarantined == 2)
-    kept = [json.loads(line) for line in (tmp_path / "quarantine.jsonl").read_text().splitlines()]
-    assert [entry["topic"] for entry in kept] == [TOPIC, "levelbook/nowhere/readings"]
-    assert "is no JSON" in kept[0]["reason"] and "there is no tank 'nowhere'" in kept[1]["reason"]
+    kept = quarantined(site)
+    assert [entry.topic for entry in kept] == [TOPIC, "levelbook/nowhere/readings"]
+    assert "is no JSON" in kept[0].reason and "there is no tank 'nowhere'" in kept[1].reason
     assert len(listener.said) == 2 and all("\n" not in line for line in listener.said)
 
 
@@ -266,11 +271,9 @@ def test_a_pack_is_quarantined_once_however_many_faults_it_has_and_its_line_cann
         logger.publish(TOPIC, '[{"bn":"north/","n":"\\u001b[2J\\n","v":1}]', qos=1)
         logger.publish(TOPIC, b"\xff\x00", qos=1)
         eventually(lambda: listener.tally.quarantined == 3)
-    kept = [json.loads(line) for line in (tmp_path / "quarantine.jsonl").read_text().splitlines()]
-    assert (
-        "sends level, the site file says counts (and 2 more)" in kept[0]["reason"] and json.loads(kept[0]["payload"]) == other
-    )
-    assert base64.b64decode(kept[2]["payload_base64"]) == b"\xff\x00"
+    kept = {entry.payload: entry.reason for entry in quarantined(site)}
+    assert "sends level, the site file says counts (and 2 more)" in kept.pop(json.dumps(other).encode())
+    assert b"\xff\x00" in kept
     assert len(listener.said) == 3 and all(line.isprintable() for line in listener.said)
 
 
@@ -282,7 +285,7 @@ def test_another_reading_of_the_same_identity_is_quarantined_and_the_first_stays
         logger.publish(TOPIC, payload(0, 2).replace('"v":7001', '"v":9999'), qos=1)
         eventually(lambda: listener.tally.quarantined == 1 and listener.tally.repeated == 1)
     assert "another reading of life k1, seq 1 is in the book" in listener.said[0] and stored(site) == [0, 1]
-    assert "9999" in (tmp_path / "quarantine.jsonl").read_text()
+    assert b"9999" in quarantined(site)[0].payload
 
 
 def test_a_broker_that_is_not_there_is_told_once_with_the_reason(tmp_path: Path) -> None:
@@ -301,3 +304,68 @@ def test_a_site_file_has_a_session_of_its_own(tmp_path: Path) -> None:
         (tmp_path / folder).mkdir(exist_ok=True)
         names.append(session_name(site_of(tmp_path / folder)))
     assert names[0] == names[2] != names[1] and all(name.isalnum() and len(name) == 23 for name in names)
+
+
+def test_receipts_go_past_readings_that_are_safe_in_quarantine(site: Site, broker: Broker) -> None:
+    receipts: list[dict[str, object]] = []
+    lost = payload(2, 1).replace('"bt":1767225720', '"bt":946684920')  # a clock that began again in 2000
+    with listening(site), client(broker) as logger:
+        logger.on_message = lambda client, userdata, message: receipts.append(json.loads(message.payload))
+        logger.subscribe("levelbook/north/kept", 1)
+        for one in (payload(0, 2), lost, payload(3, 2)):
+            logger.publish(TOPIC, one, qos=1).wait_for_publish(5)
+        eventually(lambda: receipts and receipts[-1]["seq"] == 4)
+        logger.publish(TOPIC, lost, qos=1).wait_for_publish(5)
+        eventually(lambda: [entry.times for entry in quarantined(site)] == [2])
+    assert stored(site) == [0, 1, 3, 4] and "before 2015" in quarantined(site)[0].reason
+
+
+def test_a_logger_without_a_clock_is_heard_once_and_its_first_times_stay(site: Site, broker: Broker) -> None:
+    relative = payload(0, 3).replace('"bt":1767225600', '"bt":-120')
+    with listening(site) as listener, client(broker) as logger:
+        logger.publish(TOPIC, relative, qos=1).wait_for_publish(5)
+        eventually(lambda: listener.tally.new == 3)
+        with open_book(site.store_url) as book:
+            before = book.readings("north")
+        time.sleep(1.1)
+        logger.publish(TOPIC, relative, qos=1).wait_for_publish(5)
+        eventually(lambda: listener.tally.repeated == 3)
+    with open_book(site.store_url) as book:
+        after = book.readings("north")
+    assert after.equals(before) and not quarantined(site)
+    assert after["time"].diff().dt.total_seconds().iloc[1:].tolist() == [60.0, 60.0]
+    assert abs(after["time"].iloc[-1].timestamp() - time.time()) < 10
+
+
+def test_a_backlog_from_before_a_change_of_signal_is_read_by_the_sensor_of_its_time(broker: Broker, tmp_path: Path) -> None:
+    text = (
+        SITE.replace("[tank.north.sensor]", "[[tank.north.sensor]]")
+        + """[[tank.north.sensor]]
+since = 2026-01-01T00:02:00Z
+signal = "pressure"
+pressure = "gauge"
+height = "0.1 m"
+"""
+    )
+    site = site_of(tmp_path, text + f"[mqtt]\nport = {broker.port}\n")
+    with listening(site), client(broker) as logger:
+        logger.publish(TOPIC, payload(2, 2).replace('"n":"counts"', '"n":"pressure","u":"Pa"'), qos=1)
+        logger.publish(TOPIC, payload(0, 2), qos=1)
+        eventually(lambda: stored(site) == [0, 1, 2, 3])
+
+
+def test_what_a_logger_says_of_its_troubles_is_told_once_and_kept(site: Site, broker: Broker) -> None:
+    says = payload(0, 1).replace(
+        '{"n":"oldest","v":0}', '{"n":"oldest","v":0},{"n":"dropped","v":7},{"n":"faults:sensor","v":2},{"n":"settings","v":3}'
+    )
+    with listening(site) as listener, client(broker) as logger:
+        for _ in range(2):
+            logger.publish(TOPIC, says, qos=1)
+        eventually(lambda: listener.tally.packs == 2)
+    assert listener.said == ["north: its logger says: dropped 7, faults:sensor 2"]
+    with open_book(site.store_url) as book:
+        assert json.loads(book._db.execute("SELECT said FROM logger").fetchone()[0]) == {
+            "dropped": 7,
+            "faults:sensor": 2,
+            "settings": 3,
+        }

@@ -23,7 +23,7 @@ def pack(*records: dict[str, object]) -> bytes:
 
 
 def read(payload: bytes, topic: str = TOPIC):
-    return decode(topic, payload, {"north": "counts", "mill": "current"}.get, NOW)
+    return decode(topic, payload, lambda tank, when: {"north": "counts", "mill": "current"}.get(tank), NOW)
 
 
 GOOD = ({"bn": "north/", "bt": 1767225600, "n": "counts", "v": 100}, {"n": "life", "vs": "k"}, {"n": "seq", "v": 7})
@@ -133,7 +133,7 @@ def test_a_good_reading_beside_a_bad_one_is_kept() -> None:
             "sends current, the site file says counts",
         ),
         (({"bn": "north/", "bt": 1767225600, "n": "seq", "v": 3},), "sends no raw signal"),
-        (({**GOOD[0], "bt": 300_000_000},), "before 2000"),
+        (({**GOOD[0], "bt": 300_000_000},), "before 2015"),
         (({**GOOD[0]}, {"n": "mood", "v": 3}), "'mood' is no name known here"),
         (({"bn": "north/", "bt": 1767225600, "n": "counts", "vs": "100"},), "counts is no number"),
         (({**GOOD[0]}, {"n": "seq", "v": -1}), "seq -1 is no whole number"),

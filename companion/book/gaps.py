@@ -1,0 +1,66 @@
+"""Readings that are missing from the book: holes in the seqs of a tank's logger."""
+
+from __future__ import annotations
+
+import json
+import sqlite3
+from dataclasses import dataclass
+from datetime import UTC, datetime, timedelta
+
+EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
+HOLES = """
+SELECT t.word, l.word, seq, next, after_us, before_us, g.oldest FROM (
+    SELECT tank, life, seq, time_us AS after_us, lead(seq) OVER one AS next, lead(time_us) OVER one AS before_us FROM (
+        SELECT tank, life, seq, time_us FROM reading UNION SELECT tank, life, seq, NULL FROM refused)
+    WINDOW one AS (PARTITION BY tank, life ORDER BY seq))
+JOIN name t ON t.id = tank JOIN name l ON l.id = life LEFT JOIN logger g USING (tank, life)
+WHERE next > seq + 1 AND l.word NOT IN ('file', 'wire') ORDER BY t.word, after_us, l.word, seq
+"""  # a file's and a strange logger's seqs are times
+
+
+@dataclass(frozen=True)
+class Gap:
+    """Readings first to last of a tank's life that are not in the book; after and before: times of those around, where known.
+
+    gone: the logger no longer holds them, so they cannot come; else they may still.
+    """
+
+    tank: str
+    life: str
+    first: int
+    last: int
+    after: datetime | None
+    before: datetime | None
+    gone: bool
+
+    def line(self) -> str:
+        """What there is to say of it."""
+        n = self.last - self.first + 1
+        when = " to ".join("?" if at is None else f"{at:%Y-%m-%dT%H:%M:%SZ}" for at in (self.after, self.before))
+        fate = "the logger no longer has them" if self.gone else "they may still come"
+        return f"{self.tank}: {n} reading{'s' if n > 1 else ''} missing, life {self.life}, seq {self.first} to {self.last}, {when}; {fate}"
+
+
+def gaps(db: sqlite3.Connection) -> list[Gap]:
+    """The book's gaps, by tank and time; one that the logger has half let go stands as two."""
+    found = []
+    for tank, life, seq, following, after, before, oldest in db.execute(HOLES):
+        ends = [seq + 1, following] if oldest is None or not seq + 1 < oldest < following else [seq + 1, oldest, following]
+        for first, end in zip(ends, ends[1:], strict=False):
+            found.append(Gap(tank, life, first, end - 1, _time(after), _time(before), oldest is not None and first < oldest))
+    return found
+
+
+def hear(db: sqlite3.Connection, tank: int, life: int, oldest: int | None, said: dict[str, object], at: float) -> None:
+    """Note what a logger says of itself: the lowest seq it still holds, its troubles; within the caller's transaction."""
+    row = db.execute("SELECT oldest, said FROM logger WHERE tank = ? AND life = ?", (tank, life)).fetchone()
+    known = (row[0], json.loads(row[1])) if row else (None, {})
+    oldest = max(oldest, known[0]) if oldest is not None and known[0] is not None else oldest if known[0] is None else known[0]
+    db.execute(
+        "INSERT OR REPLACE INTO logger VALUES (?, ?, ?, ?, ?)",
+        (tank, life, oldest, json.dumps(known[1] | said), round(at * 1e6)),
+    )
+
+
+def _time(microseconds: int | None) -> datetime | None:
+    return None if microseconds is None else EPOCH + timedelta(microseconds=microseconds)
