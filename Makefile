@@ -42,7 +42,7 @@ $(BIN)/levelbook-test: $(BIN)/levelbook
 # cannot be had, the tests that need it are skipped with a line that says what to install.
 tools:
 	@missing=""; \
-	for need in mosquitto:mosquitto qemu-system-arm:qemu-system-arm node:nodejs npm:npm; do \
+	for need in mosquitto:mosquitto qemu-system-arm:qemu-system-arm node:nodejs npm:npm psql:postgresql; do \
 	  command -v $${need%%:*} >/dev/null || [ -x /usr/sbin/$${need%%:*} ] || missing="$$missing $${need##*:}"; done; \
 	[ -e $(FIRMWARE) ] || missing="$$missing firmware-microbit-micropython"; \
 	if [ -n "$$missing" ] && [ "$$(id -u)" = 0 ] && command -v apt-get >/dev/null; then \

@@ -114,6 +114,18 @@ def _parser() -> argparse.ArgumentParser:
     span(sub, "T")
     output(sub, "picture: .png, .svg or .pdf", None)
     site(add("listen", _listen, "readings from MQTT into the book, until stopped", "site.toml"))
+    sub = site(
+        add("move", _move, "the book into another store, the copy proved", "site.toml --to postgresql://db.example/levelbook")
+    )
+    sub.add_argument("--to", required=True, metavar="URL", help="an empty store: sqlite:FILE or postgresql://HOST/NAME")
+    sub = site(
+        add("backup", _backup, "the book of this moment into a file, proved; listening may go on", "site.toml -o 2026-03-01.db")
+    )
+    output(sub, "a new file", None)
+    sub = site(
+        add("restore", _restore, "a backup into the site's book, which must be empty, proved", "site.toml 2026-03-01.db")
+    )
+    sub.add_argument("backup", type=Path, metavar="FILE", help="what levelbook backup wrote")
     sub = tank(add("pack", _pack, "a logger's bundle for a tank", "site.toml north -o north-logger --main main.py"))
     output(sub, "folder for the bundle; one that is there is replaced", None)
     sub.add_argument("--main", type=Path, metavar="FILE", help="the program that the board runs, like those of examples/boards")
@@ -190,6 +202,7 @@ def _load(args: argparse.Namespace) -> int:
     frame, rejects = _readings(args, tank)
     with open_book(site.store_url) as book:
         added = book.add(tank.name, frame)
+        book.seal()
     print(f"{tank.name}: {added.new} new readings, {added.repeated} already in the book", file=sys.stderr)
     status = _told(args, rejects, len(frame), "read")
     if len(added.conflicts):
@@ -282,6 +295,39 @@ def _gaps(args: argparse.Namespace) -> int:
         found = [gap for gap in book.gaps() if gap.tank in wanted]
     print("\n".join(gap.line() for gap in found) or "no reading is missing")
     return int(bool(found))
+
+
+def _move(args: argparse.Namespace) -> int:
+    site = _site(args)
+    _copied(site.store_url, args.to)
+    print(f'the copy is proved; to use it write url = "{args.to}" under [store] in {site.path}')
+    return 0
+
+
+def _backup(args: argparse.Namespace) -> int:
+    if Path(args.output).exists():
+        raise WrongUse(f"-o {args.output}: is there already; name a new file")
+    _copied(_site(args).store_url, f"sqlite:{args.output}")
+    print(f"{args.output}: the backup is proved")
+    return 0
+
+
+def _restore(args: argparse.Namespace) -> int:
+    if not args.backup.is_file():
+        raise WrongUse(f"{args.backup}: there is no such file; name a backup")
+    _copied(f"sqlite:{args.backup}", _site(args).store_url)
+    print("the book is restored, and proved")
+    return 0
+
+
+def _copied(source: str, target: str) -> None:
+    """A book copied whole, and what was proved of it."""
+    from companion.book.move import move
+    from companion.book.store import open_book
+
+    with open_book(source, create=False) as one, open_book(target) as other:
+        for proof in move(one, other):
+            print(f"{proof.table}: {proof.rows:,} rows, sha256 {proof.digest[:16]}")
 
 
 def _pack(args: argparse.Namespace) -> int:

@@ -3,18 +3,21 @@
 from __future__ import annotations
 
 import json
-import sqlite3
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 
+from companion.book.engine import Engine
+
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 HOLES = """
-SELECT t.word, l.word, seq, next, after_us, before_us, g.oldest FROM (
-    SELECT tank, life, seq, time_us AS after_us, lead(seq) OVER one AS next, lead(time_us) OVER one AS before_us FROM (
-        SELECT tank, life, seq, time_us FROM reading UNION SELECT tank, life, seq, NULL FROM refused)
-    WINDOW one AS (PARTITION BY tank, life ORDER BY seq))
+SELECT t.word, l.word, last, next, after_us, before_us, g.oldest FROM (
+    SELECT tank, life, last, end_us AS after_us, lead(first) OVER one AS next, lead(start_us) OVER one AS before_us FROM (
+        SELECT tank, life, seq AS first, seq AS last, time_us AS start_us, time_us AS end_us FROM reading
+        UNION ALL SELECT tank, life, seq, seq, NULL, NULL FROM refused
+        UNION ALL SELECT tank, life, first, last, start_us, end_us FROM run) AS runs
+    WINDOW one AS (PARTITION BY tank, life ORDER BY first, last)) AS holes
 JOIN name t ON t.id = tank JOIN name l ON l.id = life LEFT JOIN logger g USING (tank, life)
-WHERE next > seq + 1 AND l.word NOT IN ('file', 'wire') ORDER BY t.word, after_us, l.word, seq
+WHERE next > last + 1 AND l.word NOT IN ('file', 'wire') ORDER BY t.word, after_us, l.word, last
 """  # a file's and a strange logger's seqs are times
 
 
@@ -41,25 +44,24 @@ class Gap:
         return f"{self.tank}: {n} reading{'s' if n > 1 else ''} missing, life {self.life}, seq {self.first} to {self.last}, {when}; {fate}"
 
 
-def gaps(db: sqlite3.Connection) -> list[Gap]:
+def gaps(engine: Engine) -> list[Gap]:
     """The book's gaps, by tank and time; one that the logger has half let go stands as two."""
     found = []
-    for tank, life, seq, following, after, before, oldest in db.execute(HOLES):
+    for tank, life, seq, following, after, before, oldest in engine.execute(HOLES).fetchall():
         ends = [seq + 1, following] if oldest is None or not seq + 1 < oldest < following else [seq + 1, oldest, following]
         for first, end in zip(ends, ends[1:], strict=False):
             found.append(Gap(tank, life, first, end - 1, _time(after), _time(before), oldest is not None and first < oldest))
     return found
 
 
-def hear(db: sqlite3.Connection, tank: int, life: int, oldest: int | None, said: dict[str, object], at: float) -> None:
+def hear(engine: Engine, tank: int, life: int, oldest: int | None, said: dict[str, object], at: float) -> None:
     """Note what a logger says of itself: the lowest seq it still holds, its troubles; within the caller's transaction."""
-    row = db.execute("SELECT oldest, said FROM logger WHERE tank = ? AND life = ?", (tank, life)).fetchone()
-    known = (row[0], json.loads(row[1])) if row else (None, {})
-    oldest = max(oldest, known[0]) if oldest is not None and known[0] is not None else oldest if known[0] is None else known[0]
-    db.execute(
-        "INSERT OR REPLACE INTO logger VALUES (?, ?, ?, ?, ?)",
-        (tank, life, oldest, json.dumps(known[1] | said), round(at * 1e6)),
-    )
+    row = engine.execute("SELECT oldest, said FROM logger WHERE tank = ? AND life = ?", (tank, life)).fetchone()
+    known, before = (row[0], json.loads(row[1])) if row else (None, {})
+    oldest = max((seq for seq in (known, oldest) if seq is not None), default=None)
+    engine.execute(
+        "INSERT INTO logger VALUES (?, ?, ?, ?, ?) ON CONFLICT (tank, life) DO UPDATE SET oldest = excluded.oldest, said = excluded.said,"
+        " heard_us = excluded.heard_us", (tank, life, oldest, json.dumps(before | said), round(at * 1e6)))  # fmt: skip
 
 
 def _time(microseconds: int | None) -> datetime | None:

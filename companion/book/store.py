@@ -1,14 +1,15 @@
-"""The book: where raw readings lie, in SQLite.
+"""The book: where raw readings lie, in SQLite or PostgreSQL.
 
 Only what the sensor said is kept, with the time it arrived; figures are computed on reading. (tank, life, seq) is a
 reading's identity: said again it is counted and not stored twice; said otherwise it is a conflict, and the first stays.
-One process writes, others read without being blocked (WAL); a commit is on the disk when add() returns (synchronous FULL).
+A commit is on the disk when add() returns. Open days lie as rows, closed days sealed (days.py).
 """
 
 from __future__ import annotations
 
 import contextlib
 import sqlite3
+import time
 from collections.abc import Iterator
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
@@ -19,13 +20,17 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from companion.book import days
 from companion.book.aside import Aside
+from companion.book.engine import Engine, Postgres, Sqlite
 from companion.book.gaps import Gap, gaps, hear
 from companion.book.readings import COLUMNS, empty_frame, frame_of
-from companion.book.schema import VERSION, upgrade
+from companion.book.schema import POSTGRES, SQLITE
 
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
+FOREVER = 2**62
 CONTENT = ("time_us", "raw", "temperature_c", "barometer_pa", "headspace_pa", "battery_v")
+OPEN_DAYS = 2  # a day is sealed when it has been over for so long
 
 
 class BookError(Exception):
@@ -42,46 +47,67 @@ class Added:
 
 
 def open_book(url: str, create: bool = True) -> Book:
-    """The book at a URL such as sqlite:book.db; made where there is none, unless create is False. BookError."""
+    """The book at sqlite:FILE or postgresql://HOST/NAME; made where there is none, unless create is False. BookError."""
     kind, _, rest = url.partition(":")
+    if kind in ("postgresql", "postgres") and rest:
+        return Book(_postgres(url))
     if kind != "sqlite" or not rest:
-        raise BookError(f"store url '{url}': only SQLite books so far; write sqlite:FILE, e.g. sqlite:book.db")
+        raise BookError(f"store url '{url}': is no store; write sqlite:FILE, e.g. sqlite:book.db, or postgresql://HOST/NAME")
     path = Path(rest)
     if not path.exists() and not create:
         raise BookError(f"{path}: there is no book yet; put readings in it with levelbook load or levelbook listen")
     if not path.parent.is_dir():
         raise BookError(f"{path}: the folder {path.parent} does not exist; make it, or name another in [store] url")
-    return Book(path)
+    try:
+        engine = Sqlite(path)
+        version = engine.upgrade()
+    except sqlite3.DatabaseError as error:
+        raise BookError(f"{path}: cannot be used as a book ({error}); name another file in [store] url") from None
+    if version > len(SQLITE):
+        raise BookError(f"{path}: a book of version {version}, this levelbook reads version {len(SQLITE)}; upgrade levelbook")
+    return Book(engine)
+
+
+def _postgres(url: str) -> Engine:
+    try:
+        import psycopg
+    except ImportError:
+        raise BookError("psycopg is missing, for a book in PostgreSQL: pip install 'levelbook[postgres]'") from None
+    try:
+        engine = Postgres(url)
+        version = engine.upgrade()
+    except psycopg.Error as error:
+        why = str(error).strip().splitlines()[-1]
+        raise BookError(
+            f"store url: the book in PostgreSQL cannot be opened ({why}); check [store] url and the server"
+        ) from None
+    if version > len(POSTGRES):
+        raise BookError(
+            f"{engine.name}: a book of version {version}, this levelbook reads version {len(POSTGRES)}; upgrade levelbook"
+        )
+    return engine
 
 
 class Book:
     """An open book. Use one in each thread, and close it, or use it as a context manager."""
 
-    def __init__(self, path: Path) -> None:
-        self.path = path
-        try:
-            self._db = sqlite3.connect(path, timeout=30.0, isolation_level=None)
-            self._db.execute("PRAGMA journal_mode = WAL")
-            self._db.execute("PRAGMA synchronous = FULL")
-            version = upgrade(self._db)
-        except sqlite3.DatabaseError as error:
-            raise BookError(f"{path}: cannot be used as a book ({error}); name another file in [store] url") from None
-        if version > VERSION:
-            raise BookError(f"{path}: a book of version {version}, this levelbook reads version {VERSION}; upgrade levelbook")
+    def __init__(self, engine: Engine) -> None:
+        self.engine, self.name, self.troubles = engine, engine.name, engine.troubles
         self._ids: dict[str, int] = {}
-        self.aside = Aside(self._db, self._id)
         self._whole: dict[tuple[str, str], int] = {}
+        self.aside = Aside(engine, self.id_of)
 
     @contextlib.contextmanager
     def change(self) -> Iterator[None]:
         """One transaction: what is put and kept in the block is committed when it ends, or nothing of it."""
-        self._db.execute("BEGIN IMMEDIATE")
+        self.engine.begin()
         try:
             yield
-            self._db.execute("COMMIT")
+            self.engine.execute("COMMIT")
         except BaseException:
-            self._db.execute("ROLLBACK")
             self._ids.clear()
+            with contextlib.suppress(*self.troubles):  # a connection that is gone has rolled back
+                self.engine.execute("ROLLBACK")
             raise
 
     def add(self, tank: str, frame: pd.DataFrame) -> Added:
@@ -95,57 +121,97 @@ class Book:
         timed: the times are the logger's own; where they are told from the arrival, because it has no clock, the first time told
         stays, and another is no conflict.
         """
-        lives = {life: self._id(life) for life in frame["life"].unique()}
-        columns = [frame["life"].map(lives).tolist(), frame["seq"].tolist(), _microseconds(frame["time"])]
+        if frame.empty:
+            return Added(0, 0, frame)
+        where, lives = self.id_of(tank), {life: self.id_of(life) for life in frame["life"].unique()}
+        self.engine.hold(where)
+        sealed = days.sealed_already(self.engine, where, lives, frame, timed)
+        arrived = time.time_ns() // 1000
+        columns = [
+            frame["life"].map(lives).tolist(),
+            frame["seq"].tolist(),
+            pd.DatetimeIndex(frame["time"]).as_unit("us").asi8.tolist(),
+        ]
         columns += [_nullable(frame[name]) for name in COLUMNS[1:6]]
-        db, where = self._db, self._id(tank)
-        db.execute("DELETE FROM temp.incoming")
-        db.executemany(
-            "INSERT INTO temp.incoming VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?)", zip(*columns, range(len(frame)), strict=True)
-        )
-        arrived = (datetime.now(UTC) - EPOCH) // timedelta(microseconds=1)
-        new = db.execute(
-            "INSERT OR IGNORE INTO reading SELECT ?, life, seq, time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, ?"
-            " FROM temp.incoming ORDER BY row", (where, arrived)).rowcount  # fmt: skip
-        other = " OR ".join(f"i.{name} IS NOT r.{name}" for name in (CONTENT if timed else CONTENT[1:]))
-        rows = db.execute(
-            f"SELECT i.row FROM temp.incoming i JOIN reading r ON r.tank = ? AND r.life = i.life AND r.seq = i.seq WHERE {other}",
-            (where,)).fetchall() if new < len(frame) else []  # fmt: skip
-        return Added(new, len(frame) - new - len(rows), frame.iloc[[row for (row,) in rows]])
+        told = [(where, *row, arrived, n) for n, row in enumerate(zip(*columns, strict=True)) if n not in sealed]
+        told.sort(
+            key=lambda row: (row[1], row[2])
+        )  # many writers take rows in one order, so that none waits for another in a ring
+        self.engine.incoming(told)
+        new = self.engine.execute(
+            "INSERT INTO reading SELECT tank, life, seq, time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, arrived_us"
+            " FROM incoming WHERE true ORDER BY life, seq, row_ ON CONFLICT DO NOTHING").rowcount  # fmt: skip
+        clash = [place for place, same in sealed.items() if not same]
+        if new < len(told):
+            other = " OR ".join(f"i.{name} {{differs}} r.{name}" for name in (CONTENT if timed else CONTENT[1:]))
+            clash += [row for (row,) in self.engine.execute(
+                f"SELECT i.row_ FROM incoming i JOIN reading r ON r.tank = i.tank AND r.life = i.life AND r.seq = i.seq WHERE {other}").fetchall()]  # fmt: skip
+        return Added(new, len(frame) - new - len(clash), frame.iloc[sorted(clash)])
+
+    def seal(self, now: datetime | None = None) -> int:
+        """Seal the days that have been over for OPEN_DAYS; returns how many. Readings do not change by it."""
+        before = (now or datetime.now(UTC)) - timedelta(days=OPEN_DAYS)
+        due = days.due(self.engine, (before - EPOCH) // timedelta(microseconds=1))
+        for tank, day in due:
+            with self.change():
+                self.engine.hold(tank, alone=True)
+                days.seal_day(self.engine, tank, day, self.id_of)
+        return len(due)
 
     def readings(self, tank: str, start: datetime | None = None, end: datetime | None = None) -> pd.DataFrame:
         """The tank's readings with start <= time < end, in order of time (and of identity at one time)."""
-        rows = self._db.execute(
-            "SELECT time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, n.word, seq FROM reading r"
-            " JOIN name n ON n.id = r.life WHERE tank = (SELECT id FROM name WHERE word = ?) AND time_us >= ? AND time_us < ?"
-            " ORDER BY time_us, n.word, seq", (tank, _stamp(start, -(2**62)), _stamp(end, 2**62))).fetchall()  # fmt: skip
-        if not rows:
+        where = self._known(tank)
+        if where is None:
             return empty_frame()
-        time_us, raw, *others, life, seq = zip(*rows, strict=True)
-        named = dict(zip(COLUMNS[2:6], (np.array(column, float) for column in others), strict=True))
-        return frame_of(np.array(time_us, "datetime64[us]"), np.array(raw, float), life=list(life), seq=list(seq), **named)
+        stretch = _stamp(start, -FOREVER), _stamp(end, FOREVER)
+        with self._still():
+            late = days.rows(self.engine, where, *stretch)
+            parts = days.blobs(self.engine, where, *stretch) + ([late] if late else [])
+        if not parts:
+            return empty_frame()
+        whole = days.joined(parts)
+        inside = slice(*np.searchsorted(whole["time_us"], stretch))
+        part = {name: column[inside] for name, column in whole.items()}
+        if not len(part["seq"]):
+            return empty_frame()
+        named = {name: part[name] for name in COLUMNS[2:6]}
+        return frame_of(part["time_us"].astype("datetime64[us]"), part["raw"], life=part["life"], seq=part["seq"], **named)
+
+    @contextlib.contextmanager
+    def _still(self) -> Iterator[None]:
+        """Two looks at one moment: what is sealed between them is in neither or in both else."""
+        inside = self.engine.look()
+        try:
+            yield
+        finally:
+            if inside:
+                self.engine.execute("COMMIT")
 
     def last(self, tank: str) -> pd.DataFrame:
         """The tank's latest reading, as a frame of one row; of none where there is none."""
-        row = self._db.execute(
-            "SELECT max(time_us) FROM reading WHERE tank = (SELECT id FROM name WHERE word = ?)", (tank,)
-        ).fetchone()
-        if row[0] is None:
+        where = self._known(tank)
+        found = [] if where is None else [
+            self.engine.execute("SELECT max(time_us) FROM reading WHERE tank = ?", (where,)).fetchone()[0],
+            self.engine.execute(f"SELECT max(day) * {days.DAY_US} FROM sealed_day WHERE tank = ?", (where,)).fetchone()[0]]  # fmt: skip
+        times = [int(at) for at in found if at is not None]
+        if not times:
             return empty_frame()
-        return self.readings(tank, EPOCH + timedelta(microseconds=row[0])).tail(1).reset_index(drop=True)
+        return self.readings(tank, EPOCH + timedelta(microseconds=max(times))).tail(1).reset_index(drop=True)
 
     def tanks(self) -> list[str]:
         """Names of the tanks that have readings."""
-        rows = self._db.execute("SELECT word FROM name WHERE id IN (SELECT DISTINCT tank FROM reading) ORDER BY word")
-        return [word for (word,) in rows]
+        rows = self.engine.execute(
+            "SELECT word FROM name WHERE id IN (SELECT tank FROM reading UNION SELECT tank FROM sealed_day)"
+        )
+        return sorted(word for (word,) in rows.fetchall())
 
     def hear(self, tank: str, life: str, oldest: int | None, said: dict[str, Any], at: float) -> None:
         """Note what a logger says of itself, within change(): the lowest seq it still holds, its troubles."""
-        hear(self._db, self._id(tank), self._id(life), oldest, said, at)
+        hear(self.engine, self.id_of(tank), self.id_of(life), oldest, said, at)
 
     def gaps(self) -> list[Gap]:
         """Readings that are missing, by tank and time."""
-        return gaps(self._db)
+        return gaps(self.engine)
 
     def kept(self, tank: str, life: str, oldest: int | None = None) -> int | None:
         """The highest seq of a life up to which every reading that still existed is stored or in quarantine; None where that is none.
@@ -158,51 +224,51 @@ class Book:
             return None
         seq = self._whole.get(key)
         if seq is None or (oldest is not None and oldest - 1 > seq):
-            low = min((first for (first,) in self._seqs(ids, "min(seq)", oldest or 0) if first is not None), default=None)
+            least = oldest or 0
+            low = min((max(first, least) for first, _ in self._runs(ids, least)), default=None)
             if low is None or (oldest is not None and low > oldest):
                 return seq
-            seq = low
-        for (stored,) in self._seqs(ids, "seq", seq + 1):
-            if stored != seq + 1:
+            seq = low - 1
+        for first, last in self._runs(ids, seq + 1):
+            if first > seq + 1:
                 break
-            seq = stored
+            seq = max(seq, last)
         self._whole[key] = seq
         return seq
 
-    def _seqs(self, ids: list[int | None], what: str, least: int) -> sqlite3.Cursor:
-        of = f"SELECT {what} AS seq FROM {{}} WHERE tank = ? AND life = ? AND seq >= ?"
-        return self._db.execute(f"{of.format('reading')} UNION {of.format('refused')} ORDER BY 1", (*ids, least, *ids, least))
+    def _runs(self, ids: list[int | None], least: int) -> Iterator[tuple[int, int]]:
+        """Runs of a life's seqs in the book that end at a seq or above, in order."""
+        row = "SELECT seq, seq AS last FROM {} WHERE tank = ? AND life = ? AND seq >= ?"
+        run = "SELECT first, last FROM run WHERE tank = ? AND life = ? AND last >= ?"
+        sql = f"{row.format('reading')} UNION ALL {row.format('refused')} UNION ALL {run} ORDER BY 1"
+        yield from self.engine.execute(sql, (*ids, least) * 3)
 
-    def _id(self, word: str) -> int:
+    def id_of(self, word: str) -> int:
+        """The number of a name in the book, made where it has none, within change()."""
         known = self._known(word)
         if known is None:
-            known = self._ids[word] = int(
-                self._db.execute("INSERT INTO name (word) VALUES (?) RETURNING id", (word,)).fetchone()[0]
-            )
+            self.engine.execute("INSERT INTO name (word) VALUES (?) ON CONFLICT DO NOTHING", (word,))
+            known = self._known(word)
+            assert known is not None
         return known
 
     def _known(self, word: str) -> int | None:
         if word not in self._ids:
-            row = self._db.execute("SELECT id FROM name WHERE word = ?", (word,)).fetchone()
+            row = self.engine.execute("SELECT id FROM name WHERE word = ?", (word,)).fetchone()
             if row is None:
                 return None
             self._ids[word] = int(row[0])
         return self._ids[word]
 
     def close(self) -> None:
-        """Close the book; the file is whole at any time, closed or not."""
-        self._db.close()
+        """Close the book; what is committed is safe at any time, closed or not."""
+        self.engine.close()
 
     def __enter__(self) -> Book:
         return self
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
         self.close()
-
-
-def _microseconds(times: pd.Series) -> list[int]:
-    stamps = pd.DatetimeIndex(times).as_unit("us").asi8.tolist()
-    return [int(stamp) for stamp in stamps]
 
 
 def _nullable(numbers: pd.Series) -> list[float | None]:

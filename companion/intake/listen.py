@@ -12,7 +12,6 @@ import contextlib
 import json
 import queue
 import signal
-import sqlite3
 import sys
 import threading
 import time
@@ -33,6 +32,7 @@ from companion.settings.site import Site
 WAITING = 10_000  # packs in the queue at most
 TOGETHER = 2_000  # packs in one transaction at most
 RECEIPT_S = 1.0  # between two receipts of a tank at least
+SEAL_S = 3600.0  # between two looks for days that are over
 AGAIN_S = 2.0  # until a book that could not write is tried again
 
 
@@ -82,6 +82,7 @@ class Listener:
         self._queue: queue.Queue[Message] = queue.Queue(WAITING)
         self._connection, self._turning = 0, threading.Lock()  # a connection's number; held while it is used or changes
         self._leaving = threading.Event()
+        self._seal_at = 0.0
         self._trouble = ""
         self._owed: dict[str, dict[str, Any]] = {}
         self._sent: dict[str, float] = {}
@@ -110,6 +111,10 @@ class Listener:
         batch = self._gathered(wait_s)
         if batch and self._stored(book, batch, stop):
             self._acknowledge(batch)
+        if not batch and time.monotonic() >= self._seal_at:
+            self._seal_at = time.monotonic() + SEAL_S
+            with contextlib.suppress(*book.troubles):
+                book.seal()
         self._receipts()
 
     def _gathered(self, wait_s: float) -> list[Message]:
@@ -125,8 +130,8 @@ class Listener:
         while True:
             try:
                 self._store(book, batch)
-            except (sqlite3.OperationalError, OSError) as error:  # a full disk, a lock
-                self._troubled(f"{book.path}: the book cannot be written ({error}); readings wait unacknowledged until it can")
+            except book.troubles as error:  # a full disk, a lock, a server that is gone
+                self._troubled(f"{book.name}: the book cannot be written ({error}); readings wait unacknowledged until it can")
                 if stop.wait(AGAIN_S):
                     return False
             else:
@@ -143,6 +148,9 @@ class Listener:
             except WireError as error:
                 bad.append(Refused(message.topic, message.payload, str(error), message.at))
         new = repeated = 0
+        packs.sort(
+            key=lambda one: one[1].tank
+        )  # in one order, so that two desks on one book do not wait for each other in a ring
         with book.change():
             for message, pack in packs:
                 faults = pack.faults

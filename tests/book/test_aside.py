@@ -10,7 +10,7 @@ import pytest
 from sites import SITE, site_of
 
 from companion.book.aside import Refused
-from companion.book.schema import STEPS
+from companion.book.schema import FIRST
 from companion.book.store import Book, open_book
 from companion.cli import main
 from companion.intake.quarantine import retry
@@ -106,7 +106,7 @@ def test_gaps_tell_what_is_missing_and_whether_it_may_still_come(
 
 def test_a_book_of_the_first_version_becomes_one_of_today_with_its_readings(tmp_path: Path) -> None:
     old = sqlite3.connect(tmp_path / "old.db")
-    old.executescript(STEPS[0])
+    old.executescript(FIRST)
     old.execute("INSERT INTO name VALUES (1, 'north'), (2, 'k')")
     old.execute("INSERT INTO reading VALUES (1, 2, 0, 1767225600000000, 7000, NULL, NULL, NULL, NULL, 0)")
     old.execute("PRAGMA user_version = 1")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import os
 import signal
 import sqlite3
@@ -12,10 +13,12 @@ from pathlib import Path
 
 import numpy as np
 import pandas as pd
+import postgres
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from companion.book import sealed
 from companion.book.readings import frame_of
 from companion.book.store import Book, BookError, open_book
 
@@ -27,9 +30,19 @@ def some(first: int, n: int, life: str = "a1", raw: float = 6000.0) -> pd.DataFr
     return frame_of(MARCH + seq * np.timedelta64(60, "s"), raw + seq, life=life, seq=seq, temperature_c=np.full(n, 11.5))
 
 
+def new_url(kind: str, folder: Path) -> str:
+    """A place for a new book of each kind."""
+    return f"sqlite:{folder}/book.db" if kind == "sqlite" else postgres.server().database()
+
+
+@pytest.fixture(params=["sqlite", "postgres"])
+def url(request: pytest.FixtureRequest, tmp_path: Path) -> str:
+    return new_url(request.param, tmp_path)
+
+
 @pytest.fixture
-def book(tmp_path: Path):
-    with open_book(f"sqlite:{tmp_path}/book.db") as opened:
+def book(url: str):
+    with open_book(url) as opened:
         yield opened
 
 
@@ -88,21 +101,37 @@ def test_kept_ends_before_the_first_hole_and_goes_on_when_it_is_filled(book: Boo
     assert book.kept("north", "a1", oldest=30) == 34  # 17 to 29 are gone from the logger too
 
 
-@given(st.lists(st.integers(0, 30), max_size=60))
-def test_whatever_the_order_of_packs_each_reading_stands_once(
-    tmp_path_factory: pytest.TempPathFactory, starts: list[int]
+steps = st.lists(st.one_of(st.integers(0, 4000), st.just("seal")), max_size=12)
+
+
+@pytest.mark.parametrize("kind", ["sqlite", "postgres"])
+@given(steps)
+@settings(max_examples=40)
+def test_whatever_the_order_of_packs_and_sealing_each_reading_stands_once(
+    kind: str, tmp_path_factory: pytest.TempPathFactory, steps: list[int | str]
 ) -> None:
-    path = tmp_path_factory.mktemp("any") / "book.db"
-    with open_book(f"sqlite:{path}") as book:
-        told = [book.add("north", some(start, 3)) for start in starts]
-        expected = sorted({seq for start in starts for seq in range(start, start + 3)})
-        assert book.readings("north")["seq"].tolist() == expected
-        assert sum(added.new for added in told) == len(expected)
-        assert sum(added.new + added.repeated for added in told) == 3 * len(starts)
+    """Readings of three days in packs of 300, sealed at any moment in between."""
+    with open_book(new_url(kind, tmp_path_factory.mktemp("any"))) as book:
+        starts = [step for step in steps if step != "seal"]
+        told = []
+        for step in steps:
+            if step == "seal":
+                book.seal(datetime(2026, 3, 5, 12, tzinfo=UTC))
+            else:
+                told.append(book.add("north", some(int(step), 300)))
+        expected = sorted({seq for start in starts for seq in range(int(start), int(start) + 300)})
+        found = book.readings("north")
+        assert found["seq"].tolist() == expected and (found["raw"] == 6000.0 + found["seq"]).all()
+        assert sum(added.new for added in told) == len(expected) and not any(len(added.conflicts) for added in told)
+        assert sum(added.new + added.repeated for added in told) == 300 * len(starts)
+        holes = [(gap.first, gap.last) for gap in book.gaps()]
+        assert holes == [(a + 1, b - 1) for a, b in itertools.pairwise(expected) if b > a + 1]
+        ends = [seq for seq in expected if seq + 1 not in set(expected)]
+        assert book.kept("north", "a1") == (ends[0] if ends else None)
 
 
 WRITER = """
-import sys; sys.path.insert(0, sys.argv[2])
+import sys; sys.path[:0] = [sys.argv[2], sys.argv[2] + "/tests", sys.argv[2] + "/tests/book"]
 from tests.book.test_store import some
 from companion.book.store import open_book
 with open_book("sqlite:" + sys.argv[1]) as book:
@@ -141,14 +170,63 @@ def test_a_reader_is_not_blocked_by_a_writer_in_mid_transaction(tmp_path: Path) 
         writer.close()
 
 
+def test_sealed_readings_come_back_as_they_were_in_any_stretch(book: Book) -> None:
+    frame = some(0, 5000)
+    book.add("north", frame)
+    book.add("south", frame)
+    assert book.seal(datetime(2026, 3, 5, tzinfo=UTC)) == 4  # two days that are over for two days, of two tanks
+    pd.testing.assert_frame_equal(book.readings("north"), frame)
+    start, end = datetime(2026, 3, 1, 23, 58, tzinfo=UTC), datetime(2026, 3, 2, 0, 3, tzinfo=UTC)
+    assert book.readings("north", start, end)["seq"].tolist() == list(range(1438, 1443))
+    assert book.last("north")["seq"].tolist() == [4999] and book.tanks() == ["north", "south"]
+    assert book.seal(datetime(2026, 4, 1, tzinfo=UTC)) == 4 and book.last("south")["seq"].tolist() == [4999]
+    assert book.engine.execute("SELECT count(*) FROM reading").fetchone()[0] == 0
+
+
+def test_late_readings_open_a_day_and_what_is_said_again_of_a_sealed_day_is_known(book: Book) -> None:
+    later = datetime(2026, 3, 9, tzinfo=UTC)
+    book.add("north", some(0, 100))
+    book.add("north", some(200, 100))
+    book.seal(later)
+    added = book.add("north", some(50, 200))  # 50 to 99 and 200 to 249 are there
+    assert (added.new, added.repeated) == (100, 100) and not len(added.conflicts)
+    assert book.readings("north")["seq"].tolist() == list(range(300)) and book.gaps() == []
+    clash = book.add("north", some(295, 10, raw=1.0))
+    assert (clash.new, clash.conflicts["seq"].tolist()) == (5, [295, 296, 297, 298, 299])
+    assert book.seal(later) == 1 and book.readings("north")["seq"].tolist() == list(range(305))
+    assert book.kept("north", "a1") == 304
+    with book.change():
+        moved = some(0, 5)
+        moved["time"] += pd.Timedelta(7, "s")
+        assert book.put("north", moved, timed=False).repeated == 5 and len(book.put("north", moved).conflicts) == 5
+
+
+def test_a_files_readings_are_sealed_too(book: Book) -> None:
+    frame = frame_of(MARCH + np.arange(1000) * np.timedelta64(60, "s"), np.arange(1000.0))
+    book.add("north", frame)
+    book.seal(datetime(2026, 3, 9, tzinfo=UTC))
+    assert book.add("north", frame).repeated == 1000 and book.gaps() == []
+    assert book.engine.execute("SELECT count(*) FROM run").fetchone()[0] == 1
+    pd.testing.assert_frame_equal(book.readings("north"), frame)
+
+
+def test_a_day_that_is_sealed_takes_eight_bytes_a_reading_or_fewer() -> None:
+    """A tank as the demo's: counts with noise, temperature, barometer, battery, times of arrival in packs of five."""
+    from test_sealed import day
+
+    assert len(sealed.seal(day())) <= 8 * 1440
+
+
 def test_what_is_no_book_is_one_clear_error(tmp_path: Path) -> None:
     (tmp_path / "text.db").write_text("this is not a database, and long enough to be taken for one" * 20)
     with pytest.raises(BookError, match=r"text\.db: cannot be used as a book"):
         open_book(f"sqlite:{tmp_path}/text.db")
     with pytest.raises(BookError, match="there is no book yet"):
         open_book(f"sqlite:{tmp_path}/none.db", create=False)
-    with pytest.raises(BookError, match="only SQLite books so far"):
-        open_book("postgresql://host/book")
+    with pytest.raises(BookError, match="is no store; write sqlite:FILE"):
+        open_book("mysql://host/book")
+    with pytest.raises(BookError, match="cannot be opened"):
+        open_book("postgresql:///book?host=/nowhere")
     with pytest.raises(BookError, match="does not exist; make it"):
         open_book(f"sqlite:{tmp_path}/no/book.db")
     newer = sqlite3.connect(tmp_path / "newer.db")

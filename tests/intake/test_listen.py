@@ -222,7 +222,7 @@ def test_what_an_older_connection_brought_is_not_acknowledged(site: Site, broker
 def test_a_book_that_cannot_be_written_holds_readings_back_until_it_can(site: Site, broker: Broker, monkeypatch) -> None:
     def impatient(url: str) -> Book:
         book = open_book(url)
-        book._db.execute("PRAGMA busy_timeout = 50")
+        book.engine.execute("PRAGMA busy_timeout = 50")
         return book
 
     monkeypatch.setattr("companion.intake.listen.open_book", impatient)
@@ -364,7 +364,7 @@ def test_what_a_logger_says_of_its_troubles_is_told_once_and_kept(site: Site, br
         eventually(lambda: listener.tally.packs == 2)
     assert listener.said == ["north: its logger says: dropped 7, faults:sensor 2"]
     with open_book(site.store_url) as book:
-        assert json.loads(book._db.execute("SELECT said FROM logger").fetchone()[0]) == {
+        assert json.loads(book.engine.execute("SELECT said FROM logger").fetchone()[0]) == {
             "dropped": 7,
             "faults:sensor": 2,
             "settings": 3,
