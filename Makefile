@@ -7,7 +7,7 @@ ARGS ?=
 FIRMWARE := /usr/share/firmware-microbit-micropython/firmware.hex
 WASM := build/wasm/node_modules/@micropython/micropython-webassembly-pyscript
 
-.PHONY: demo test bench lint clean tools
+.PHONY: demo test bench chaos lint clean tools
 
 demo: $(BIN)/levelbook
 	$(BIN)/levelbook demo $(ARGS)
@@ -17,6 +17,9 @@ test: $(BIN)/levelbook-test tools
 
 bench: $(BIN)/levelbook-test
 	$(BIN)/python -m tests.bench $(ARGS)
+
+chaos: $(BIN)/levelbook-test tools
+	$(BIN)/python -m tests.chaos $(ARGS)
 
 lint: $(BIN)/levelbook-test
 	$(BIN)/ruff check .

@@ -369,3 +369,40 @@ def test_what_a_logger_says_of_its_troubles_is_told_once_and_kept(site: Site, br
             "faults:sensor": 2,
             "settings": 3,
         }
+
+
+@contextlib.contextmanager
+def small_disk(folder: Path) -> Iterator[Path]:
+    """A file system of a megabyte; skips where none can be mounted."""
+    folder.mkdir()
+    if subprocess.run(["mount", "-t", "tmpfs", "-o", "size=1m", "tmpfs", str(folder)], capture_output=True).returncode:
+        pytest.skip("a small disk cannot be mounted here: run as root")
+    try:
+        yield folder
+    finally:
+        subprocess.run(["umount", "-l", str(folder)], check=True)
+
+
+def test_a_full_disk_holds_readings_back_until_there_is_room(broker: Broker, tmp_path: Path, monkeypatch) -> None:
+    monkeypatch.setattr("companion.intake.listen.AGAIN_S", 0.1)
+    with small_disk(tmp_path / "disk") as disk:
+        site = site_of(disk, SITE + f"[mqtt]\nport = {broker.port}\n")
+        with listening(site) as listener, client(broker) as logger:
+            logger.publish(TOPIC, payload(0, 5), qos=1)
+            eventually(lambda: listener.tally.new == 5)
+            with contextlib.suppress(OSError), open(disk / "other", "wb", buffering=0) as other:
+                while True:
+                    other.write(bytes(512))
+            sent = 5
+            while not listener.said:
+                logger.publish(TOPIC, payload(sent, 20), qos=1).wait_for_publish(5)
+                sent += 20
+                assert sent < 50_000
+            assert "the book cannot be written" in listener.said[0] and "full" in listener.said[0]
+            before = listener.tally.new
+            logger.publish(TOPIC, payload(sent, 20), qos=1).wait_for_publish(5)
+            time.sleep(0.5)
+            assert listener.tally.new == before
+            (disk / "other").unlink()
+            eventually(lambda: stored(site) == list(range(sent + 20)))
+        assert not quarantined(site)
