@@ -7,12 +7,13 @@ strange logger's) is told as one run from its first to its last.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
-import pandas as pd
 
 from companion.book.engine import Engine
+from companion.book.readings import Row
 from companion.book.sealed import FLOATS, Columns, seal, unseal
 
 DAY_US = 86_400_000_000
@@ -84,27 +85,22 @@ def _runs(columns: Columns) -> list[tuple[str, int, int, int, int]]:
     return out
 
 
-def sealed_already(engine: Engine, tank: int, ids: dict[str, int], frame: pd.DataFrame, timed: bool) -> dict[int, bool]:
-    """Places in a frame of the readings whose identity a sealed day has: True where it has the same of them, False where not."""
+def sealed_already(engine: Engine, tank: int, ids: dict[str, int], rows: Sequence[Row], timed: bool) -> dict[int, bool]:
+    """Places of the rows whose identity a sealed day has: True where it has the same of them, False where not."""
     days: set[int] = set()
     for life, number in ids.items():
-        seqs = frame["seq"][frame["life"] == life]
+        seqs = [row[7] for row in rows if row[6] == life]
         found = engine.execute("SELECT DISTINCT day FROM run WHERE tank = ? AND life = ? AND first <= ? AND last >= ?",
-                               (tank, number, int(seqs.max()), int(seqs.min())))  # fmt: skip
+                               (tank, number, max(seqs), min(seqs)))  # fmt: skip
         days |= {day for (day,) in found.fetchall()}
-    if not days:
-        return {}
-    known: dict[tuple[str, int], tuple[float, ...]] = {}
+    known: dict[tuple[str, int], Sequence[float]] = {}
     for day in days:
         for columns in blobs(engine, tank, day * DAY_US, (day + 1) * DAY_US):
-            kept = [columns["time_us"], *(columns[name] for name in FLOATS)]
-            known |= dict(zip(zip(columns["life"], columns["seq"].tolist(), strict=True), zip(*(column.tolist() for column in kept), strict=True), strict=True))  # fmt: skip
-    times = pd.DatetimeIndex(frame["time"]).as_unit("us").asi8.tolist()
-    here = zip(times, *(frame[name].tolist() for name in FLOATS), strict=True)
+            content = zip(columns["time_us"].tolist(), *(columns[name].tolist() for name in FLOATS), strict=True)
+            known |= dict(zip(zip(columns["life"], columns["seq"].tolist(), strict=True), content, strict=True))
     out = {}
-    for place, (identity, content) in enumerate(zip(zip(frame["life"], frame["seq"].tolist(), strict=True), here, strict=True)):
-        if identity in known:
-            out[place] = all(
-                a == b or (a != a and b != b) for a, b in list(zip(content, known[identity], strict=True))[not timed :]
-            )
+    for place, row in enumerate(rows) if known else ():
+        of = known.get((row[6], row[7]))
+        if of is not None:
+            out[place] = all(a == b or (a != a and b != b) for a, b in list(zip(row[:6], of, strict=True))[not timed :])
     return out

@@ -14,6 +14,7 @@ import io
 import math
 import re
 import sys
+from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -35,6 +36,9 @@ RAW_UNITS = {"current": {"mA": 1e-3, "A": 1.0}, "voltage": {"mV": 1e-3, "V": 1.0
              "pressure": {"Pa": 1.0, "kPa": 1e3, "bar": 1e5, "mbar": 1e2, "psi": 6894.757293168361},
              "counts": {"counts": 1.0}}  # fmt: skip
 FROM_FILE = "file"
+Row = tuple[
+    int, float, float, float, float, float, str, int
+]  # COLUMNS, the time in microseconds since 1970, NaN for what is missing
 
 _RFC3339 = re.compile(r"\d{4}-\d\d-\d\d[Tt ]\d\d:\d\d:\d\d(\.\d+)?([Zz]|[+-]\d\d:\d\d)")
 _NO_ZONE = re.compile(r"\d{4}-\d\d-\d\d([Tt ]\d\d:\d\d(:\d\d(\.\d+)?)?)?")
@@ -69,6 +73,21 @@ def frame_of(times: Any, raw: Any, life: Any = FROM_FILE, seq: Any = None, **oth
     columns["life"] = pd.Series([life] * n if isinstance(life, str) else list(life), dtype=object)
     columns["seq"] = np.asarray(stamps.asi8 if seq is None else seq, np.int64)
     return pd.DataFrame(columns)
+
+
+def frame_of_rows(rows: Sequence[Row]) -> pd.DataFrame:
+    """A frame of readings from rows."""
+    if not rows:
+        return empty_frame()
+    times, raw, *others, life, seq = zip(*rows, strict=True)
+    named: dict[str, Any] = dict(zip(COLUMNS[2:6], others, strict=True))
+    return frame_of(np.array(times, np.int64).astype("datetime64[us]"), raw, life=life, seq=seq, **named)
+
+
+def rows_of_frame(frame: pd.DataFrame) -> list[Row]:
+    """The rows of a frame of readings."""
+    times = pd.DatetimeIndex(frame["time"]).as_unit("us").asi8.tolist()
+    return list(zip(times, *(frame[name].tolist() for name in COLUMNS[1:]), strict=True))
 
 
 def empty_frame() -> pd.DataFrame:

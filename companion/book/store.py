@@ -10,7 +10,7 @@ from __future__ import annotations
 import contextlib
 import sqlite3
 import time
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
@@ -24,7 +24,7 @@ from companion.book import days
 from companion.book.aside import Aside
 from companion.book.engine import Engine, Postgres, Sqlite
 from companion.book.gaps import Gap, gaps, hear
-from companion.book.readings import COLUMNS, empty_frame, frame_of
+from companion.book.readings import COLUMNS, Row, empty_frame, frame_of, rows_of_frame
 from companion.book.schema import POSTGRES, SQLITE
 
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
@@ -116,24 +116,24 @@ class Book:
             return self.put(tank, frame)
 
     def put(self, tank: str, frame: pd.DataFrame, timed: bool = True) -> Added:
-        """Store a frame of readings of a tank, within change().
+        """Store a frame of readings of a tank, within change(); see put_rows()."""
+        new, clash = self.put_rows(tank, rows_of_frame(frame), timed)
+        return Added(new, len(frame) - new - len(clash), frame.iloc[clash])
+
+    def put_rows(self, tank: str, rows: Sequence[Row], timed: bool = True) -> tuple[int, list[int]]:
+        """Store rows of readings of a tank, within change(). Returns how many were new, and the places of those in conflict.
 
         timed: the times are the logger's own; where they are told from the arrival, because it has no clock, the first time told
         stays, and another is no conflict.
         """
-        if frame.empty:
-            return Added(0, 0, frame)
-        where, lives = self.id_of(tank), {life: self.id_of(life) for life in frame["life"].unique()}
+        if not rows:
+            return 0, []
+        where, lives = self.id_of(tank), {life: self.id_of(life) for life in {row[6] for row in rows}}
         self.engine.hold(where)
-        sealed = days.sealed_already(self.engine, where, lives, frame, timed)
+        sealed = days.sealed_already(self.engine, where, lives, rows, timed)
         arrived = time.time_ns() // 1000
-        columns = [
-            frame["life"].map(lives).tolist(),
-            frame["seq"].tolist(),
-            pd.DatetimeIndex(frame["time"]).as_unit("us").asi8.tolist(),
-        ]
-        columns += [_nullable(frame[name]) for name in COLUMNS[1:6]]
-        told = [(where, *row, arrived, n) for n, row in enumerate(zip(*columns, strict=True)) if n not in sealed]
+        told = [(where, lives[life], seq, at, *(None if number != number else number for number in numbers), arrived, n)
+                for n, (at, *numbers, life, seq) in enumerate(rows) if n not in sealed]  # fmt: skip
         told.sort(
             key=lambda row: (row[1], row[2])
         )  # many writers take rows in one order, so that none waits for another in a ring
@@ -146,7 +146,7 @@ class Book:
             other = " OR ".join(f"i.{name} {{differs}} r.{name}" for name in (CONTENT if timed else CONTENT[1:]))
             clash += [row for (row,) in self.engine.execute(
                 f"SELECT i.row_ FROM incoming i JOIN reading r ON r.tank = i.tank AND r.life = i.life AND r.seq = i.seq WHERE {other}").fetchall()]  # fmt: skip
-        return Added(new, len(frame) - new - len(clash), frame.iloc[sorted(clash)])
+        return new, sorted(clash)
 
     def seal(self, now: datetime | None = None) -> int:
         """Seal the days that have been over for OPEN_DAYS; returns how many. Readings do not change by it."""
@@ -269,10 +269,6 @@ class Book:
 
     def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
         self.close()
-
-
-def _nullable(numbers: pd.Series) -> list[float | None]:
-    return [None if number != number else number for number in numbers.tolist()]
 
 
 def _stamp(time: datetime | None, without: int) -> int:

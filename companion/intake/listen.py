@@ -148,21 +148,23 @@ class Listener:
             except WireError as error:
                 bad.append(Refused(message.topic, message.payload, str(error), message.at))
         new = repeated = 0
-        packs.sort(
-            key=lambda one: one[1].tank
-        )  # in one order, so that two desks on one book do not wait for each other in a ring
         with book.change():
-            for message, pack in packs:
-                faults = pack.faults
-                if len(pack.frame):
-                    added = book.put(pack.tank, pack.frame, not pack.relative)
-                    new, repeated = new + added.new, repeated + added.repeated
-                    if len(added.conflicts):
-                        faults = [*faults, conflict(pack, added.conflicts["seq"].tolist())]
-                if faults:
-                    bad.append(_refused(message, pack, faults))
-                if pack.life is not None:
-                    book.hear(pack.tank, str(pack.life), pack.oldest, pack.said, message.at)
+            for (tank, relative), group in sorted(
+                _together(packs).items()
+            ):  # in one order: two desks on one book must not wait for each other
+                rows = [row for _, pack in group for row in pack.rows]
+                added, clash = book.put_rows(tank, rows, not relative)
+                new, repeated = new + added, repeated + len(rows) - added - len(clash)
+                start = 0
+                for message, pack in group:
+                    end = start + len(pack.rows)
+                    seqs = [rows[place][7] for place in clash if start <= place < end]
+                    faults = pack.faults + ([conflict(pack, seqs)] if seqs else [])
+                    if faults:
+                        bad.append(_refused(message, pack, faults))
+                    start = end
+            for (tank, life), (pack, at) in _speakers(packs).items():
+                book.hear(tank, life, pack.oldest, self._said.get(tank, {}) | pack.said, at)
             book.aside.keep(bad)
         self.tally = Tally(
             self.tally.packs + len(batch),
@@ -174,6 +176,7 @@ class Listener:
             self._say(one_line(f"{refused.topic}: quarantined: {refused.reason}"))
         for _, pack in packs:
             self._heard(pack)
+        for pack, _ in _speakers(packs).values():
             self._owe(book, pack)
 
     def _heard(self, pack: Pack) -> None:
@@ -254,6 +257,19 @@ class Listener:
     @property
     def _broker(self) -> str:
         return f"broker {self.site.mqtt.host}:{self.site.mqtt.port}"
+
+
+def _together(packs: list[tuple[Message, Pack]]) -> dict[tuple[str, bool], list[tuple[Message, Pack]]]:
+    """Packs by tank, and whether their times are told from the arrival."""
+    groups: dict[tuple[str, bool], list[tuple[Message, Pack]]] = {}
+    for message, pack in packs:
+        groups.setdefault((pack.tank, pack.relative), []).append((message, pack))
+    return groups
+
+
+def _speakers(packs: list[tuple[Message, Pack]]) -> dict[tuple[str, str], tuple[Pack, float]]:
+    """The last pack of each life of a tank, and when it came."""
+    return {(pack.tank, str(pack.life)): (pack, message.at) for message, pack in packs if pack.life is not None}
 
 
 def _refused(message: Message, pack: Pack, faults: list[str]) -> Refused:

@@ -32,9 +32,9 @@ def retry(site: Site, book: Book, ids: Sequence[int] = ()) -> Tried:
                 book.aside.reason(entry.id, str(error))
                 refused += 1
                 continue
-            added = book.put(pack.tank, pack.frame, not pack.relative) if len(pack.frame) else None
-            readings += added.new if added else 0
-            faults = pack.faults + ([conflict(pack, added.conflicts["seq"].tolist())] if added and len(added.conflicts) else [])
+            new, clash = book.put_rows(pack.tank, pack.rows, not pack.relative)
+            readings += new
+            faults = pack.faults + ([conflict(pack, [pack.rows[place][7] for place in clash])] if clash else [])
             if faults:
                 book.aside.reason(entry.id, told(faults))
                 refused += 1
@@ -45,7 +45,7 @@ def retry(site: Site, book: Book, ids: Sequence[int] = ()) -> Tried:
 
 def conflict(pack: Pack, seqs: Sequence[int]) -> str:
     """Why readings of a pack are refused whose identities the book has with other content."""
-    return f"another reading of life {pack.frame['life'].iloc[0]}, seq {', '.join(map(str, seqs[:5]))} is in the book"
+    return f"another reading of life {pack.rows[0][6]}, seq {', '.join(map(str, seqs[:5]))} is in the book"
 
 
 def told(faults: Sequence[str]) -> str:

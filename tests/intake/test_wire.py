@@ -11,8 +11,10 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from companion.book.store import Book, open_book
+from companion.intake import wire
 from companion.intake.senml import WireError, resolve
 from companion.intake.wire import decode
+from core_mp import senml
 
 TOPIC = "levelbook/north/readings"
 NOW = 1_770_000_000.0
@@ -227,3 +229,50 @@ def test_no_payload_breaks_the_reader_or_the_book(book: Book, payload: bytes) ->
     else:
         assert np.isfinite(found.frame["raw"]).all() and (found.frame["seq"] >= 0).all()
         book.add("north", found.frame)
+
+
+value = st.one_of(st.integers(-5, 70000), st.floats(allow_nan=False, width=32), st.just("x"), st.none(), st.booleans())
+record = st.dictionaries(st.sampled_from(["n", "v", "u", "t", "vs", "bt"]), st.one_of(value, st.sampled_from(["counts", "seq", "temperature", "Cel", "dropped", "faults:link"])), max_size=5)  # fmt: skip
+good_reading = st.tuples(
+    st.integers(0, 3), st.integers(0, 40), st.integers(0, 60000), st.one_of(st.none(), st.floats(0, 30, width=32))
+)
+
+
+@given(st.lists(good_reading, max_size=5), st.lists(st.tuples(st.integers(0, 12), record), max_size=3), st.integers(-100, 100))
+def test_the_quick_way_says_what_the_strict_way_says_or_nothing(
+    readings: list[tuple], strange: list[tuple[int, dict]], later: int
+) -> None:
+    """Packs as a logger writes them, with records of any kind thrown in."""
+    records: list[dict[str, object]] = [
+        {"bn": "north/", "bt": int(NOW) - 50 + later, "n": "life", "vs": "k"},
+        {"n": "oldest", "v": 0},
+    ]
+    at = 0
+    for step, seq, raw, warm in readings:
+        at += step
+        t = {"t": at} if at else {}
+        records += [
+            {**t, "n": "counts", "v": raw},
+            *([{**t, "n": "temperature", "u": "Cel", "v": warm}] if warm is not None else []),
+            {**t, "n": "seq", "v": seq},
+        ]
+    for place, one in strange:
+        records.insert(min(place, len(records)), one)
+    payload, signal_of = json.dumps(records).encode(), lambda tank, when: "counts"
+    plain = wire.quick("north", payload, signal_of, NOW)
+    if plain is None:
+        return
+    careful = wire.strict("north", payload, signal_of, NOW)
+    assert not careful.faults and (plain.life, plain.oldest, plain.said, plain.relative) == (
+        careful.life,
+        careful.oldest,
+        careful.said,
+        False,
+    )
+    assert repr(plain.rows) == repr(careful.rows)
+
+
+def test_a_loggers_own_pack_goes_the_quick_way() -> None:
+    rows = [(seq, 1767225600 + 60 * seq, 7000 + seq, 9.5, None, None, 3.6) for seq in range(3)]
+    plain = wire.quick("north", senml.pack("north", "counts", "k", 0, rows).encode(), lambda tank, when: "counts", NOW)
+    assert plain is not None and len(plain.rows) == 3 and plain.oldest == 0
