@@ -17,6 +17,7 @@ from companion.book.schema import INCOMING, POSTGRES, SQLITE
 WAIT_S = 30.0  # for another's lock
 LOCK = 7274  # our advisory locks in PostgreSQL: with a tank's number, 0 for the tables, -1 for partitions
 EPOCH = datetime(1970, 1, 1)
+COLUMNS = "(tank, life, seq, time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, arrived_us)"
 
 
 class Engine(Protocol):
@@ -31,8 +32,11 @@ class Engine(Protocol):
     def many(self, sql: str, rows: Iterable[Sequence[Any]]) -> None:
         """One statement for many rows."""
 
-    def incoming(self, rows: Iterable[Sequence[Any]]) -> None:
+    def incoming(self, rows: Sequence[Sequence[Any]]) -> None:
         """Fill the table of what has come, incoming, anew."""
+
+    def store(self, rows: Sequence[Sequence[Any]]) -> int:
+        """Put rows of incoming's columns into reading, but for those whose identity is there; returns how many were new."""
 
     def begin(self) -> None:
         """Begin a transaction that may write."""
@@ -73,7 +77,16 @@ class Sqlite:
         """One statement for many rows."""
         self.db.executemany(sql, rows)
 
-    def incoming(self, rows: Iterable[Sequence[Any]]) -> None:
+    def store(self, rows: Sequence[Sequence[Any]]) -> int:
+        """Put rows of incoming's columns into reading, but for those whose identity is there; returns how many were new."""
+        return int(
+            self.db.executemany(
+                f"INSERT INTO reading {COLUMNS} VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?) ON CONFLICT DO NOTHING",
+                (row[:10] for row in rows),
+            ).rowcount
+        )
+
+    def incoming(self, rows: Sequence[Sequence[Any]]) -> None:
         """Fill the table of what has come, incoming, anew."""
         self.db.execute("DELETE FROM incoming")
         self.db.executemany("INSERT INTO incoming VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)", rows)
@@ -146,7 +159,17 @@ class Postgres:
         with self.db.cursor() as cursor:
             cursor.executemany(sql.replace("?", "%s"), rows)
 
-    def incoming(self, rows: Iterable[Sequence[Any]]) -> None:
+    def store(self, rows: Sequence[Sequence[Any]]) -> int:
+        """Put rows of incoming's columns into reading, but for those whose identity is there; returns how many were new."""
+        self.incoming(rows)
+        names = COLUMNS.strip("()")
+        return int(
+            self.db.execute(
+                f"INSERT INTO reading {COLUMNS} SELECT {names} FROM incoming ORDER BY life, seq, row_ ON CONFLICT DO NOTHING"
+            ).rowcount
+        )
+
+    def incoming(self, rows: Sequence[Sequence[Any]]) -> None:
         """Fill the table of what has come, incoming, anew; COPY is the fast way in."""
         self.db.execute("TRUNCATE incoming")
         with self.db.cursor() as cursor, cursor.copy("COPY incoming FROM STDIN (FORMAT BINARY)") as copy:

@@ -137,12 +137,10 @@ class Book:
         told.sort(
             key=lambda row: (row[1], row[2])
         )  # many writers take rows in one order, so that none waits for another in a ring
-        self.engine.incoming(told)
-        new = self.engine.execute(
-            "INSERT INTO reading SELECT tank, life, seq, time_us, raw, temperature_c, barometer_pa, headspace_pa, battery_v, arrived_us"
-            " FROM incoming WHERE true ORDER BY life, seq, row_ ON CONFLICT DO NOTHING").rowcount  # fmt: skip
+        new = self.engine.store(told) if told else 0
         clash = [place for place, same in sealed.items() if not same]
         if new < len(told):
+            self.engine.incoming(told)
             other = " OR ".join(f"i.{name} {{differs}} r.{name}" for name in (CONTENT if timed else CONTENT[1:]))
             clash += [row for (row,) in self.engine.execute(
                 f"SELECT i.row_ FROM incoming i JOIN reading r ON r.tank = i.tank AND r.life = i.life AND r.seq = i.seq WHERE {other}").fetchall()]  # fmt: skip

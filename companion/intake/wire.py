@@ -9,7 +9,7 @@ ones are taken and the bad ones told in faults.
 
 from __future__ import annotations
 
-import json
+import functools
 import math
 import re
 import time
@@ -32,6 +32,11 @@ SIGNALS = ("counts", "current", "voltage", "pressure", "level")
 LOGGER = re.compile(r"life|oldest|dropped|settings|refused|faults:[a-z]+")  # what a logger says of itself, not of a reading
 EARLIEST = 1420070400.0  # 2015-01-01: an earlier time comes from a clock that was lost
 AHEAD_S = 3600.0  # a later time than the arrival's by more than this comes from a wrong clock
+HEAD = re.compile(
+    rb'\[\{"bn":"([a-z0-9_-]+)/","bt":([0-9]{10}),"n":"life","vs":"([A-Za-z0-9]{1,64})"\},\{"n":"oldest","v":([0-9]{1,18})\}'
+    rb'((?:,\{"n":"(?:dropped|settings|faults:[a-z]+)","v":[0-9]{1,18}\})*)'
+)
+SAID = re.compile(rb'"n":"([a-z:]+)","v":([0-9]+)')
 NAN = math.nan
 SignalOf = Callable[[str, float], str | None]
 NO_LIFE = "wire"  # of a logger that says neither life nor seq: its seq is the time in microseconds
@@ -99,52 +104,41 @@ def strict(tank: str, payload: bytes, signal_of: SignalOf, arrived: float) -> Pa
 
 
 def quick(tank: str, payload: bytes, signal_of: SignalOf, arrived: float) -> Pack | None:
-    """decode() for a pack as core_mp/senml.py writes it, with nothing wrong in it: the same, sooner. None for any other."""
-    try:
-        records = json.loads(payload)
-        head = records[0]
-        if len(head) != 4 or head["bn"] != f"{tank}/" or head["n"] != "life":
-            return None
-        life, start = head["vs"], head["bt"]
-        if type(life) is not str or not LIFE.fullmatch(life) or type(start) is not int or not EARLIEST <= start <= arrived:
-            return None
-        signal = signal_of(tank, start)
-        said: dict[str, Any] = {}
-        rows: list[Row] = []
-        group: dict[str, Any] = {}
-        at = 0
-        for record in records[1:]:
-            name, value, size = record["n"], record["v"], len(record)
-            t = record.get("t", 0)
-            size -= ("t" in record) + ("u" in record)
-            if size != 2 or type(t) is not int or t < 0 or type(value) not in (int, float) or not -1e300 < value < 1e300:
-                return None
-            if name in UNITS:
-                if record.get("u") != UNITS[name] or name in group or (group and t != at):
-                    return None
-                at = t
-                group[name] = value
-                if name == "seq":
-                    when = start + t
-                    if (
-                        type(value) is not int
-                        or not 0 <= value < 2**63
-                        or when > arrived
-                        or (t and signal_of(tank, when) != signal)
-                        or signal not in group
-                    ):
-                        return None
-                    get = group.get
-                    rows.append((when * 1_000_000, float(group[signal]), float(get("temperature", NAN)), float(get("barometer", NAN)),
-                                 float(get("headspace", NAN)), float(get("battery", NAN)), life, value))  # fmt: skip
-                    group = {}
-            elif t or "u" in record or type(value) is not int or not LOGGER.fullmatch(name) or name in said:
-                return None
-            else:
-                said[name] = value
-    except (ValueError, TypeError, KeyError, IndexError, AttributeError, RecursionError):
+    """decode() for a pack exactly as core_mp/senml.py writes it, with nothing wrong in it: the same, sooner. None for any other."""
+    head = HEAD.match(payload)
+    if head is None or head[1].decode() != tank:
         return None
-    return None if group else Pack(tank, rows, life, _whole(said.pop("oldest", None)), [], (), False, said)
+    start, life, signal = int(head[2]), head[3].decode(), signal_of(tank, int(head[2]))
+    last = min(arrived, start + 1e9)
+    if signal is None or not EARLIEST <= start <= last or signal_of(tank, last) != signal:
+        return None
+    rows: list[Row] = []
+    end = head.end()
+    for found in _reading(signal).finditer(payload, end):
+        t, raw, temperature, barometer, headspace, battery, seq = found.groups()
+        when = start + int(t[4:-1]) if t else start
+        if found.start() != end or when > last:
+            return None
+        end = found.end()
+        rows.append((when * 1_000_000, float(raw), float(temperature or NAN), float(barometer or NAN), float(headspace or NAN),
+                     float(battery or NAN), life, int(seq)))  # fmt: skip
+    if payload[end:] != b"]":
+        return None
+    said: dict[str, Any] = {name.decode(): int(value) for name, value in SAID.findall(head[5])}
+    return Pack(tank, rows, life, int(head[4]), [], (), False, said)
+
+
+@functools.cache
+def _reading(signal: str) -> re.Pattern[bytes]:
+    """A reading's records as core_mp/senml.py writes them: all with the first one's t, or all without."""
+    parts = []
+    for name in (signal, *PLACES, "seq"):
+        unit = f',"u":"{UNITS[name]}"' if UNITS[name] else ""
+        t = '(?P<t>"t":[1-9][0-9]{0,8},)?' if name == signal else "(?(t)(?P=t)|)"
+        number = "([0-9]{1,18})" if name == "seq" else r"(-?(?:0|[1-9][0-9]{0,14})(?:\.[0-9]{1,17})?(?:e[+-]?[0-9]{1,2})?)"
+        record = rf',\{{{t}"n":"{name}"{unit},"v":{number}\}}'
+        parts.append(f"(?:{record})?" if name in PLACES else record)
+    return re.compile("".join(parts).encode())
 
 
 def _life(told: list[Any]) -> str | int | None:
