@@ -61,7 +61,7 @@ def bench_columns(tank, n: int = 10_000_000) -> None:
     raw, t, b = (frame[name].to_numpy(float) for name in ("raw", "temperature_c", "barometer_pa"))
     period = tank.periods()[0]
     core, xs, ys = tank.core(period), period.strapping.levels_m, period.strapping.volumes_m3
-    (air, rise), g, span = core.air, core.filling[2], 1e5 / (32767 - 6553)
+    (air, rise), g, span = core.air, core.gravity, 1e5 / (32767 - 6553)
 
     def expression(raw: np.ndarray, t: np.ndarray, b: np.ndarray) -> tuple[np.ndarray, ...]:
         p = (raw - 6553) * span
@@ -129,11 +129,118 @@ def bench_board() -> None:
     tell("board: a look-up in 1,000 rows, against one in 10", thousand / 1e6, ten / 1e6, 1.5, " are millions of instructions")
 
 
+def bench_book(folder: Path) -> None:
+    """A tank's year from sealed days into figures, against sqlite3 fetching the same rows from a plain table; bytes a reading."""
+    import sqlite3
+
+    from sites import site_of
+
+    from companion.book.store import open_book
+    from companion.figures.convert import convert
+
+    frame = readings(525_600)
+    with open_book(f"sqlite:{folder}/year.db") as book:
+        book.add("north", frame)
+        plain = sqlite3.connect(folder / "plain.db")
+        plain.execute(
+            "CREATE TABLE reading (life TEXT, seq INTEGER, time_us INTEGER, raw REAL, temperature_c REAL, barometer_pa REAL, headspace_pa REAL, battery_v REAL)"
+        )
+        plain.executemany("INSERT INTO reading VALUES (?, ?, ?, ?, ?, ?, ?, ?)",
+                          zip(frame["life"], frame["seq"].tolist(), frame["time"].astype("int64").tolist(), *(frame[name].tolist() for name in list(frame)[1:6]), strict=True))  # fmt: skip
+        plain.commit()
+        book.seal()
+        size = book.engine.execute("SELECT sum(length(blob)) FROM sealed_day").fetchone()[0]
+        tank = site_of(folder).tank("north")
+        ours, ceiling = against(
+            lambda: convert(tank, book.readings("north"), doubts=False),
+            lambda: plain.execute("SELECT * FROM reading").fetchall(),
+            3,
+        )
+    tell("book: a year of sealed days into figures, against a plain fetch", ours, ceiling, 0.25)
+    print(f"{'book: a reading in a sealed day':<62} {size / len(frame):.2f} bytes, goal 8")
+
+
+def bench_listen(folder: Path, packs: int, each: int) -> float:
+    """Packs a second into SQLite, acknowledged after the commit, against a paho-mqtt subscriber that counts and throws away; both drain
+    a backlog of the same mosquitto. Returns readings a second.
+    """
+    import threading
+
+    import paho.mqtt.client as mqtt
+    from paho.mqtt.enums import CallbackAPIVersion
+    from sites import SITE, site_of
+
+    from companion.field.broker import local_broker
+    from companion.intake.connect import session_name
+    from companion.intake.listen import Listener
+    from core_mp import senml
+
+    def client(name: str, **told: object) -> mqtt.Client:
+        one = mqtt.Client(CallbackAPIVersion.VERSION2, name, clean_session=False)
+        for key, value in told.items():
+            setattr(one, key, value)
+        one.max_inflight_messages_set(1000)
+        one.connect("127.0.0.1", broker.port)
+        one.loop_start()
+        return one
+
+    def fill(name: str) -> None:
+        ready = threading.Event()
+        absent = client(
+            name, on_connect=lambda c, *_: c.subscribe("levelbook/+/readings", 1), on_subscribe=lambda *_: ready.set()
+        )
+        ready.wait(10)
+        absent.disconnect()
+        absent.loop_stop()
+        logger = client("logger")
+        for n in range(packs):
+            rows = [
+                (seq, 1767225600 + 60 * seq, 7000 + seq % 900, 9.5, None, None, 3.6) for seq in range(n * each, (n + 1) * each)
+            ]
+            last = logger.publish("levelbook/north/readings", senml.pack("north", "counts", "k", 0, rows), qos=1)
+        last.wait_for_publish(60)
+        logger.disconnect()
+        logger.loop_stop()
+
+    with local_broker(program="mosquitto") as broker:
+        (folder / f"listen{each}").mkdir()
+        site = site_of(folder / f"listen{each}", SITE + f"[mqtt]\nport = {broker.port}\n")
+        fill("counter")
+        got, done = [0], threading.Event()
+
+        def count(*_: object) -> None:
+            got[0] += 1
+            if got[0] == packs:
+                done.set()
+
+        start = time.perf_counter()
+        counter = client("counter", on_message=count)
+        done.wait(120)
+        ceiling = time.perf_counter() - start
+        counter.disconnect()
+        counter.loop_stop()
+        fill(session_name(site))
+        listener, stop = Listener(site, lambda line: None), threading.Event()
+        thread = threading.Thread(target=listener.run, args=(stop,))
+        start = time.perf_counter()
+        thread.start()
+        while listener.tally.packs < packs:
+            time.sleep(0.005)
+        ours = time.perf_counter() - start
+        stop.set()
+        thread.join()
+    tell(f"listen: {packs:,} packs of {each} into SQLite, against counting them", ours, ceiling, 1.0)
+    return packs * each / ours
+
+
 def main() -> None:
     with tempfile.TemporaryDirectory() as name:
         tank = bench_site(Path(name))
         bench_columns(tank)
         bench_file(tank, Path(name))
+        bench_book(Path(name))
+        one, ten = bench_listen(Path(name), 20_000, 1), bench_listen(Path(name), 5_000, 10)
+        print(f"{'listen: readings a second in packs of ten, against packs of one':<62} {ten / one:6.2f} times, goal 5")
     bench_board()
 
 
