@@ -9,6 +9,7 @@ import sys
 import tempfile
 import time
 from collections.abc import Callable
+from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
@@ -148,7 +149,7 @@ def bench_book(folder: Path) -> None:
         plain.executemany("INSERT INTO reading VALUES (?, ?, ?, ?, ?, ?, ?, ?)",
                           zip(frame["life"], frame["seq"].tolist(), frame["time"].astype("int64").tolist(), *(frame[name].tolist() for name in list(frame)[1:6]), strict=True))  # fmt: skip
         plain.commit()
-        book.seal()
+        book.seal(datetime(2027, 2, 1, tzinfo=UTC))
         size = book.engine.execute("SELECT sum(length(blob)) FROM sealed_day").fetchone()[0]
         tank = site_of(folder).tank("north")
         ours, ceiling = against(
