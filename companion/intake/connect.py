@@ -5,6 +5,7 @@ from __future__ import annotations
 import hashlib
 import os
 import socket
+from collections.abc import Sequence
 
 import paho.mqtt.client as mqtt
 from paho.mqtt.enums import CallbackAPIVersion, MQTTProtocolVersion
@@ -14,6 +15,7 @@ from paho.mqtt.properties import Properties
 from companion.settings.errors import SiteError
 from companion.settings.site import Site
 
+PUBACK = 0x40
 LOOPBACK = ("localhost", "127.0.0.1", "::1")
 KEEPALIVE_S = 30
 LASTING = 0xFFFFFFFF  # session expiry interval of MQTT 5 (3.1.2.11.2): never, as in MQTT 3.1.1
@@ -40,6 +42,20 @@ def connect(client: mqtt.Client, site: Site) -> None:
     else:
         client.connect_async(of.host, of.port, KEEPALIVE_S)
     client.loop_start()
+
+
+def acknowledge(client: mqtt.Client, mids: Sequence[int]) -> None:
+    """Acknowledge QoS 1 messages by their packet ids, in this order, written together: thousands in the time of tens.
+
+    A PUBACK of either version is four bytes (MQTT 3.1.1 and 5, 3.4). paho has no word for many at once, so that they go into its
+    queue as one; a paho without that queue gets them one by one.
+    """
+    queue = getattr(client, "_packet_queue", None)
+    if queue is None:
+        for mid in mids:
+            client.ack(mid, 1)
+    elif mids:
+        queue(PUBACK, b"".join(b"\x40\x02" + mid.to_bytes(2, "big") for mid in mids), mids[-1], 1)
 
 
 def session_name(site: Site) -> str:

@@ -23,7 +23,7 @@ import paho.mqtt.client as mqtt
 
 from companion.book.aside import Refused
 from companion.book.store import Book, open_book
-from companion.intake.connect import client_of, connect
+from companion.intake.connect import acknowledge, client_of, connect
 from companion.intake.quarantine import conflict, one_line, told
 from companion.intake.senml import WireError
 from companion.intake.wire import Pack, decode
@@ -189,9 +189,9 @@ class Listener:
 
     def _acknowledge(self, batch: list[Message]) -> None:
         with self._turning:  # a packet id of an older connection may stand for another message on this one
-            for message in batch:
-                if message.connection == self._connection and message.qos:
-                    self._client.ack(message.mid, message.qos)
+            acknowledge(
+                self._client, [message.mid for message in batch if message.connection == self._connection and message.qos]
+            )
 
     def _owe(self, book: Book, pack: Pack) -> None:
         if pack.life is None:

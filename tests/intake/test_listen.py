@@ -23,7 +23,7 @@ from sites import SITE, site_of
 from companion.book.aside import Entry
 from companion.book.store import Book, open_book
 from companion.field.broker import Broker, local_broker
-from companion.intake.connect import session_name
+from companion.intake.connect import acknowledge, session_name
 from companion.intake.listen import Listener, Message
 from companion.settings.errors import SiteError
 from companion.settings.site import Site
@@ -204,8 +204,9 @@ def test_what_an_older_connection_brought_is_not_acknowledged(site: Site, broker
 
     monkeypatch.setattr(Listener, "_store", slowly)
     with listening(site) as listener, client(broker) as logger:
-        ack = listener._client.ack
-        listener._client.ack = lambda mid, qos: acknowledged.append(mid) or ack(mid, qos)
+        monkeypatch.setattr(
+            "companion.intake.listen.acknowledge", lambda client, mids: acknowledged.extend(mids) or acknowledge(client, mids)
+        )
         logger.publish(TOPIC, payload(0, 1), qos=1)
         assert writing.wait(10)
         intruder = mqtt.Client(CallbackAPIVersion.VERSION2, session_name(site), clean_session=False)
