@@ -24,9 +24,10 @@ import paho.mqtt.client as mqtt
 from companion.book.aside import Refused
 from companion.book.store import Book, open_book
 from companion.intake.connect import acknowledge, client_of, connect
+from companion.intake.mapped import taken
 from companion.intake.quarantine import conflict, one_line, told
 from companion.intake.senml import WireError
-from companion.intake.wire import Pack, decode
+from companion.intake.wire import Pack
 from companion.settings.site import Site
 
 WAITING = 10_000  # packs in the queue at most
@@ -87,6 +88,7 @@ class Listener:
         self._owed: dict[str, dict[str, Any]] = {}
         self._sent: dict[str, float] = {}
         self._said: dict[str, dict[str, Any]] = {}  # what loggers say of themselves
+        self._topics = [*site.mqtt.topics, *dict.fromkeys(mapping.filter for mapping in site.wire.values())]
         self._client = client_of(site)
         for name in ("on_connect", "on_connect_fail", "on_disconnect", "on_subscribe", "on_message"):
             setattr(self._client, name, getattr(self, name))
@@ -144,7 +146,7 @@ class Listener:
         bad: list[Refused] = []
         for message in batch:
             try:
-                packs.append((message, decode(message.topic, message.payload, self.site.signal, message.at)))
+                packs.append((message, taken(self.site, message.topic, message.payload, message.at)))
             except WireError as error:
                 bad.append(Refused(message.topic, message.payload, str(error), message.at))
         new = repeated = 0
@@ -220,11 +222,11 @@ class Listener:
             return
         with self._turning:
             self._connection += 1
-        client.subscribe([(topic, 1) for topic in self.site.mqtt.topics])
+        client.subscribe([(topic, 1) for topic in self._topics])
 
     def on_subscribe(self, client: mqtt.Client, userdata: Any, mid: int, reasons: Any, properties: Any) -> None:
         """paho's: the subscriptions stand, or were refused."""
-        refused = [topic for topic, reason in zip(self.site.mqtt.topics, reasons, strict=False) if reason.is_failure]
+        refused = [topic for topic, reason in zip(self._topics, reasons, strict=False) if reason.is_failure]
         if refused:
             self._troubled(f"{self._broker}: refuses {', '.join(refused)}; let this user read it, or mend topics in [mqtt]")
             return

@@ -6,8 +6,9 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from companion.book.store import Book
+from companion.intake.mapped import taken
 from companion.intake.senml import WireError
-from companion.intake.wire import Pack, decode
+from companion.intake.wire import Pack
 from companion.settings.site import Site
 
 LONGEST = 300  # letters of a line for people
@@ -27,7 +28,7 @@ def retry(site: Site, book: Book, ids: Sequence[int] = ()) -> Tried:
     for entry in book.aside.entries(ids):
         with book.change():
             try:
-                pack = decode(entry.topic, entry.payload, site.signal, entry.arrived.timestamp())
+                pack = taken(site, entry.topic, entry.payload, entry.arrived.timestamp())
             except WireError as error:
                 book.aside.reason(entry.id, str(error))
                 refused += 1

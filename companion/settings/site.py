@@ -13,6 +13,7 @@ from zoneinfo import ZoneInfo
 from companion.settings.errors import SiteError
 from companion.settings.keys import Keys
 from companion.settings.tank import Period, TankSettings, read_tank
+from companion.settings.wire import Mapping, read_mapping
 from companion.units import QuantityError, read
 
 __all__ = ["Mqtt", "Period", "Site", "TankSettings", "Zone", "load_site"]
@@ -46,7 +47,7 @@ class Zone:
 
 @dataclass(frozen=True)
 class Site:
-    """A site as its file tells it. units: "metric" or "us", what people are shown. wire: mappings for other makes, as they stand."""
+    """A site as its file tells it. units: "metric" or "us", what people are shown. wire: mappings for loggers of other makes."""
 
     path: Path
     name: str
@@ -58,7 +59,7 @@ class Site:
     mqtt: Mqtt
     tanks: dict[str, TankSettings]
     zones: dict[str, Zone] = field(default_factory=dict)
-    wire: dict[str, Any] = field(default_factory=dict)
+    wire: dict[str, Mapping] = field(default_factory=dict)
 
     def signal(self, name: str, at_s: float) -> str | None:
         """What a tank's logger sends at a time [s since 1970]; None where there is no such tank."""
@@ -92,11 +93,14 @@ def load_site(path: str | Path) -> Site:
     mqtt = _mqtt(Keys(keys.raw("mqtt") or {}, "mqtt", faults))
     tanks = _tanks(keys, path.parent, 45.0 if latitude is None else latitude)
     zones = {name: _zone(Keys(table, f"zone.{name}", faults), name) for name, table in _tables(keys, "zone").items()}
-    wire = _tables(keys, "wire")
+    wire = {
+        name: read_mapping(Keys(table, f"wire.{name}", faults), name, tanks) for name, table in _tables(keys, "wire").items()
+    }
     keys.unknown("format", "site", "store", "mqtt", "tank", "zone", "wire")
     if faults or zone is None or latitude is None:
         raise SiteError([f"{path}: {fault}" for fault in faults])
-    return Site(path, str(site["name"]), zone, str(site["datum"]), latitude, str(units), store, mqtt, tanks, zones, wire)
+    return Site(path, str(site["name"]), zone, str(site["datum"]), latitude, str(units), store, mqtt, tanks, zones,
+                {name: mapping for name, mapping in wire.items() if mapping is not None})  # fmt: skip
 
 
 def _toml(path: Path) -> dict[str, Any]:
