@@ -7,7 +7,7 @@ ARGS ?=
 FIRMWARE := /usr/share/firmware-microbit-micropython/firmware.hex
 WASM := build/wasm/node_modules/@micropython/micropython-webassembly-pyscript
 
-.PHONY: demo test bench chaos lint clean tools
+.PHONY: demo test bench chaos fuzz lint clean tools
 
 demo: $(BIN)/levelbook
 	$(BIN)/levelbook demo $(ARGS)
@@ -20,6 +20,9 @@ bench: $(BIN)/levelbook-test
 
 chaos: $(BIN)/levelbook-test tools
 	$(BIN)/python -m tests.chaos $(ARGS)
+
+fuzz: $(BIN)/levelbook-test
+	$(BIN)/python -m tests.fuzz_wire $(ARGS)
 
 lint: $(BIN)/levelbook-test
 	$(BIN)/ruff check .

@@ -135,7 +135,9 @@ def _reading(signal: str) -> re.Pattern[bytes]:
     for name in (signal, *PLACES, "seq"):
         unit = f',"u":"{UNITS[name]}"' if UNITS[name] else ""
         t = '(?P<t>"t":[1-9][0-9]{0,8},)?' if name == signal else "(?(t)(?P=t)|)"
-        number = "([0-9]{1,18})" if name == "seq" else r"(-?(?:0|[1-9][0-9]{0,14})(?:\.[0-9]{1,17})?(?:e[+-]?[0-9]{1,2})?)"
+        number = (
+            "([0-9]{1,18})" if name == "seq" else r"((?:-?[1-9][0-9]{0,14}|0|-0(?=[.]))(?:\.[0-9]{1,17})?(?:e[+-]?[0-9]{1,2})?)"
+        )
         record = rf',\{{{t}"n":"{name}"{unit},"v":{number}\}}'
         parts.append(f"(?:{record})?" if name in PLACES else record)
     return re.compile("".join(parts).encode())
