@@ -159,6 +159,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     sub = site(add("gaps", _gaps, "readings that loggers took and the book does not have", "site.toml"))
     sub.add_argument("--tank", metavar="T", action="append", help="only this tank; may be given again")
+    sub.add_argument("--each", action="store_true", help="a line a gap, not a summary a tank")
     return parser
 
 
@@ -287,13 +288,15 @@ def _quarantine(args: argparse.Namespace) -> int:
 
 
 def _gaps(args: argparse.Namespace) -> int:
+    from companion.book.gaps import summary
     from companion.book.store import open_book
 
     site = _site(args)
     wanted = [_known(site, name).name for name in args.tank] if args.tank else list(site.tanks)
     with open_book(site.store_url, create=False) as book:
         found = [gap for gap in book.gaps() if gap.tank in wanted]
-    print("\n".join(gap.line() for gap in found) or "no reading is missing")
+    lines = [gap.line() for gap in found] if args.each else summary(found)
+    print("\n".join(lines) or "no reading is missing")
     return int(bool(found))
 
 

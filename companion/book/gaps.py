@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime, timedelta
 
@@ -36,12 +37,32 @@ class Gap:
     before: datetime | None
     gone: bool
 
+    @property
+    def missing(self) -> int:
+        """How many readings."""
+        return self.last - self.first + 1
+
     def line(self) -> str:
         """What there is to say of it."""
-        n = self.last - self.first + 1
+        n = self.missing
         when = " to ".join("?" if at is None else f"{at:%Y-%m-%dT%H:%M:%SZ}" for at in (self.after, self.before))
         fate = "the logger no longer has them" if self.gone else "they may still come"
         return f"{self.tank}: {n} reading{'s' if n > 1 else ''} missing, life {self.life}, seq {self.first} to {self.last}, {when}; {fate}"
+
+
+def summary(found: Sequence[Gap]) -> list[str]:
+    """A line a tank: how many readings are missing, how many of them may still come, and the longest gap."""
+    lines = []
+    for tank in dict.fromkeys(gap.tank for gap in found):
+        of = [gap for gap in found if gap.tank == tank]
+        missing, coming = sum(gap.missing for gap in of), sum(gap.missing for gap in of if not gap.gone)
+        longest = max(of, key=lambda gap: gap.missing)
+        fate = f"{coming} may still come" if coming else "the loggers no longer have them"
+        lines.append(
+            f"{tank}: {missing} reading{'s' if missing > 1 else ''} missing in {len(of)} gap{'s' if len(of) > 1 else ''}; {fate}"
+        )
+        lines.append(f"  the longest: {longest.line().partition(': ')[2]}")
+    return lines
 
 
 def gaps(engine: Engine) -> list[Gap]:

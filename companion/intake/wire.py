@@ -33,8 +33,8 @@ LOGGER = re.compile(r"life|oldest|dropped|settings|refused|faults:[a-z]+")  # wh
 EARLIEST = 1420070400.0  # 2015-01-01: an earlier time comes from a clock that was lost
 AHEAD_S = 3600.0  # a later time than the arrival's by more than this comes from a wrong clock
 HEAD = re.compile(
-    rb'\[\{"bn":"([a-z0-9_-]+)/","bt":([0-9]{10}),"n":"life","vs":"([A-Za-z0-9]{1,64})"\},\{"n":"oldest","v":([0-9]{1,18})\}'
-    rb'((?:,\{"n":"(?:dropped|settings|faults:[a-z]+)","v":[0-9]{1,18}\})*)'
+    rb'\[\{"bn":"([a-z0-9_-]+)/","bt":([1-9][0-9]{9}),"n":"life","vs":"([A-Za-z0-9]{1,64})"\},\{"n":"oldest","v":(0|[1-9][0-9]{0,17})\}'
+    rb'((?:,\{"n":"(?:dropped|settings|faults:[a-z]+)","v":(?:0|[1-9][0-9]{0,17})\})*)'
 )
 SAID = re.compile(rb'"n":"([a-z:]+)","v":([0-9]+)')
 NAN = math.nan
@@ -136,7 +136,9 @@ def _reading(signal: str) -> re.Pattern[bytes]:
         unit = f',"u":"{UNITS[name]}"' if UNITS[name] else ""
         t = '(?P<t>"t":[1-9][0-9]{0,8},)?' if name == signal else "(?(t)(?P=t)|)"
         number = (
-            "([0-9]{1,18})" if name == "seq" else r"((?:-?[1-9][0-9]{0,14}|0|-0(?=[.]))(?:\.[0-9]{1,17})?(?:e[+-]?[0-9]{1,2})?)"
+            "(0|[1-9][0-9]{0,17})"
+            if name == "seq"
+            else r"((?:-?[1-9][0-9]{0,14}|0|-0(?=[.]))(?:\.[0-9]{1,17})?(?:e[+-]?[0-9]{1,2})?)"
         )
         record = rf',\{{{t}"n":"{name}"{unit},"v":{number}\}}'
         parts.append(f"(?:{record})?" if name in PLACES else record)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from companion.settings.sensor import IDENTITY
 from companion.settings.site import Site
 from companion.settings.tank import Period, TankSettings
 from core_mp.water import water_density
@@ -26,7 +27,7 @@ def _period(tank: TankSettings, period: Period) -> list[str]:
     reach = f"{table.levels_m[0]:g} to {table.levels_m[-1]:g} m, {table.volumes_m3[0]:g} to {table.volumes_m3[-1]:,.1f} m3"
     accuracy = "accuracy not told" if sensor.accuracy is None else f"accuracy {sensor.accuracy * 100:g} % of span"
     span = (
-        "" if sensor.signal == "level" else f", {sensor.scale[0][1] / 1e3:g} to {sensor.scale[-1][1] / 1e3:g} kPa, {accuracy}"
+        "" if sensor.scale == IDENTITY else f", {sensor.scale[0][1] / 1e3:g} to {sensor.scale[-1][1] / 1e3:g} kPa, {accuracy}"
     )
     return [f"{since}table {table.source}, {len(table.levels_m)} rows, {reach}",
             f"{since}sensor sends {sensor.signal}, {sensor.kind}, {sensor.height_m:g} m above tank datum{span}"]  # fmt: skip

@@ -92,6 +92,10 @@ def test_gaps_tell_what_is_missing_and_whether_it_may_still_come(
     store(0, 5, 0)
     store(10, 5, 0)
     assert main(["gaps", str(site)]) == 1
+    assert capsys.readouterr().out.startswith(
+        "north: 5 readings missing in 1 gap; 5 may still come\n  the longest: 5 readings missing"
+    )
+    assert main(["gaps", str(site), "--each"]) == 1
     assert (
         "north: 5 readings missing, life k, seq 5 to 9, 2026-01-01T00:04:00Z to 2026-01-01T00:10:00Z; they may still come"
         in capsys.readouterr().out
