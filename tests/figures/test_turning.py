@@ -57,7 +57,7 @@ def test_between_turns_the_water_goes_one_way_but_for_the_band(values: list[floa
         assert abs(levels[b] - levels[a]) > band
     for a, b, c in zip(turns, turns[1:], turns[2:], strict=False):
         if c != len(levels) - 1 and a != 0:
-            assert (levels[b] - levels[a]) * (levels[c] - levels[b]) < 0
+            assert {np.sign(levels[b] - levels[a]), np.sign(levels[c] - levels[b])} == {-1.0, 1.0}
     fill, draw = sums(levels[turns])
     assert fill - draw == pytest.approx(levels[-1] - levels[0], abs=1e-9)
 
