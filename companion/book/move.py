@@ -73,8 +73,7 @@ def _rows(book: Book, table: str, columns: str) -> Iterator[Sequence[Any]]:
     )
     first = ", ".join(f"{name}_name.word" for name in words)
     by = f"{first}, {order}" if first else order
-    collate = ' COLLATE "C"' if type(book.engine).__name__ == "Postgres" else ""
-    by = ", ".join(f"{part}{collate}" if part.endswith(".word") else part for part in by.split(", "))
+    by = ", ".join(f"{part}{book.engine.by_bytes}" if part.endswith(".word") else part for part in by.split(", "))
     cursor = book.engine.execute(f"SELECT {told} FROM {table} one {joins} ORDER BY {by}")
     while rows := cursor.fetchmany(TOGETHER):
         yield from rows

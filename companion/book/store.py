@@ -22,10 +22,12 @@ import pandas as pd
 
 from companion.book import days
 from companion.book.aside import Aside
-from companion.book.engine import Engine, Postgres, Sqlite
+from companion.book.engine import Engine
 from companion.book.gaps import Gap, gaps, hear
+from companion.book.postgres import Postgres
 from companion.book.readings import COLUMNS, Row, empty_frame, frame_of, rows_of_frame
 from companion.book.schema import POSTGRES, SQLITE
+from companion.book.sqlite import Sqlite
 
 EPOCH = datetime(1970, 1, 1, tzinfo=UTC)
 FOREVER = 2**62
