@@ -4,16 +4,19 @@ from __future__ import annotations
 
 import json
 import math
+import re
 from datetime import UTC, datetime
 from typing import Any
 
 from companion.book.readings import Row
 from companion.intake.senml import WireError
-from companion.intake.wire import AHEAD_S, EARLIEST, NAN, NO_LIFE, PLACES, Pack, decode
+from companion.intake.wire import AHEAD_S, EARLIEST, LIFE, NAN, NO_LIFE, PLACES, Pack, decode
 from companion.settings.site import Site
 from companion.settings.wire import Mapping, Place, Steps
 
 MOST = 100_000  # readings in a payload
+NUMBER = re.compile(r"\s*[-+]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][-+]?[0-9]+)?\s*")  # as text
+RFC3339 = re.compile(r"[0-9]{4}-[0-9]{2}-[0-9]{2}[Tt ][0-9]{2}:[0-9]{2}:[0-9]{2}(\.[0-9]+)?([Zz]|[+-][0-9]{2}:[0-9]{2})?")
 
 
 def taken(site: Site, topic: str, payload: bytes, arrived: float) -> Pack:
@@ -36,7 +39,7 @@ def _mapped(site: Site, mapping: Mapping, told: str, payload: bytes, arrived: fl
     except (UnicodeDecodeError, ValueError, RecursionError) as error:
         raise WireError(f"is no JSON: {str(error)[:80]}") from None
     try:
-        found = _at(root, mapping.readings) if mapping.readings else [root]
+        found = [root] if mapping.readings is None else _at(root, mapping.readings)
     except KeyError:
         raise WireError(f"has no readings where [wire.{mapping.name}] says") from None
     readings = found if isinstance(found, list) else [found]
@@ -79,7 +82,7 @@ def _row(site: Site, mapping: Mapping, tank: str, root: Any, reading: Any, arriv
         others.append(NAN if place is None or told is None else _number(place, told))
     microseconds = round(when * 1e6)
     seq = microseconds if mapping.seq is None else _whole(mapping.seq, value(mapping.seq))
-    life = NO_LIFE if mapping.seq is None else "wire-" + str(value(mapping.life))[:64] if mapping.life else "wire-"
+    life = NO_LIFE if mapping.seq is None else "wire-" + (_life(mapping.life, value(mapping.life)) if mapping.life else "")
     return (microseconds, raw, *others, life, seq)  # type: ignore[return-value]
 
 
@@ -96,10 +99,13 @@ def _at(value: Any, steps: Steps) -> Any:
 
 
 def _number(place: Place, value: Any) -> float:
+    good = (
+        NUMBER.fullmatch(value) if isinstance(value, str) else isinstance(value, (int, float)) and not isinstance(value, bool)
+    )
     try:
-        number = float("nan") if isinstance(value, bool) or not isinstance(value, (int, float, str)) else float(value)
-    except (ValueError, OverflowError):
-        number = float("nan")
+        number = float(value) if good else math.nan
+    except OverflowError:
+        number = math.nan
     number = place.a + place.b * number
     if not math.isfinite(number):
         raise ValueError(f"{place.path}: {str(value)[:40]!r} is no number")
@@ -112,19 +118,38 @@ def _whole(place: Place, value: Any) -> int:
     return value
 
 
+def _life(place: Place, value: Any) -> str:
+    """A life as text that every book can keep."""
+    if isinstance(value, bool) or not isinstance(value, (str, int)) or not LIFE.fullmatch(str(value)):
+        raise ValueError(
+            f"{place.path}: {str(value)[:40]!r} is neither text of 1 to 64 printable ASCII letters nor a whole number"
+        )
+    return str(value)
+
+
 def _time(mapping: Mapping, value: Any) -> float:
-    """Seconds since 1970."""
+    """Seconds since 1970. ValueError, too, where a clock that was changed leaves it open which."""
     kind = mapping.time_format
     try:
         if kind in ("unix", "unix_ms"):
             return _number(mapping.time, value) / (1000.0 if kind == "unix_ms" else 1.0)
-        moment = datetime.fromisoformat(value) if kind == "rfc3339" else datetime.strptime(value, kind)
+        if kind == "rfc3339" and not RFC3339.fullmatch(value):
+            raise ValueError
+        moment = datetime.fromisoformat(value.upper()) if kind == "rfc3339" else datetime.strptime(value, kind)
         zone = moment.tzinfo or mapping.zone
         if zone is None:
             raise ValueError
-        return moment.replace(tzinfo=zone).astimezone(UTC).timestamp()
+        first, second = (moment.replace(tzinfo=zone, fold=fold) for fold in (0, 1))
+        at = first.astimezone(UTC)
+        changed = first.utcoffset() != second.utcoffset()
     except (ValueError, TypeError, OverflowError):
         raise ValueError(f"{mapping.time.path}: {str(value)[:40]!r} is no time as {kind} tells it") from None
+    if changed:
+        came = "comes twice" if at.astimezone(zone).replace(tzinfo=None) == moment.replace(tzinfo=None) else "never comes"
+        raise ValueError(
+            f"{mapping.time.path}: {str(value)[:40]!r} {came} in {zone}, where clocks are changed; have the logger send UTC"
+        )
+    return at.timestamp()
 
 
 def _no_number(word: str) -> float:

@@ -13,7 +13,7 @@ from zoneinfo import ZoneInfo
 from companion.settings.errors import SiteError
 from companion.settings.keys import Keys
 from companion.settings.tank import Period, TankSettings, read_tank
-from companion.settings.wire import Mapping, read_mapping
+from companion.settings.wire import Mapping, read_mapping, shared
 from companion.units import QuantityError, read
 
 __all__ = ["Mqtt", "Period", "Site", "TankSettings", "Zone", "load_site"]
@@ -93,14 +93,11 @@ def load_site(path: str | Path) -> Site:
     mqtt = _mqtt(Keys(keys.raw("mqtt") or {}, "mqtt", faults))
     tanks = _tanks(keys, path.parent, 45.0 if latitude is None else latitude)
     zones = {name: _zone(Keys(table, f"zone.{name}", faults), name) for name, table in _tables(keys, "zone").items()}
-    wire = {
-        name: read_mapping(Keys(table, f"wire.{name}", faults), name, tanks) for name, table in _tables(keys, "wire").items()
-    }
+    wire = _wire(keys)
     keys.unknown("format", "site", "store", "mqtt", "tank", "zone", "wire")
     if faults or zone is None or latitude is None:
         raise SiteError([f"{path}: {fault}" for fault in faults])
-    return Site(path, str(site["name"]), zone, str(site["datum"]), latitude, str(units), store, mqtt, tanks, zones,
-                {name: mapping for name, mapping in wire.items() if mapping is not None})  # fmt: skip
+    return Site(path, str(site["name"]), zone, str(site["datum"]), latitude, str(units), store, mqtt, tanks, zones, wire)
 
 
 def _toml(path: Path) -> dict[str, Any]:
@@ -171,6 +168,22 @@ def _tanks(keys: Keys, folder: Path, latitude_deg: float) -> dict[str, TankSetti
         if tank is not None:
             tanks[name] = tank
     return tanks
+
+
+def _wire(keys: Keys) -> dict[str, Mapping]:
+    tanks = keys.raw("tank")
+    names = list(tanks) if isinstance(tanks, dict) else []  # those with faults too, which are told once
+    found: dict[str, Mapping] = {}
+    for name, table in _tables(keys, "wire").items():
+        of = Keys(table, f"wire.{name}", keys.faults)
+        mapping = read_mapping(of, name, names)
+        if mapping is None:
+            continue
+        for other in found.values():
+            if shared(mapping.filter, other.filter):
+                of.fault("topic", f"takes topics that [wire.{other.name}] takes; write patterns of which a topic fits one only")
+        found[name] = mapping
+    return found
 
 
 def _zone(of: Keys, name: str) -> Zone:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable
 from dataclasses import dataclass
+from datetime import UTC, datetime
 from zoneinfo import ZoneInfo
 
 from companion.settings.keys import Keys
@@ -18,6 +19,8 @@ OTHERS = {
     "battery": ("voltage", "V"),
 }
 FORMATS = ("rfc3339", "unix", "unix_ms")
+OWN = "levelbook/+/readings"  # where levelbook's own loggers send
+SAMPLE = datetime(2026, 11, 28, 21, 34, tzinfo=UTC)  # a pattern of time must be able to say it
 _STEP = re.compile(r"([^.\[\]]+)|\[(\d{1,4})\]")
 
 Steps = tuple[str | int, ...]
@@ -46,7 +49,7 @@ class Mapping:
     filter: str
     tank: str | None
     devices: dict[str, str]
-    readings: Steps
+    readings: Steps | None
     signal: str
     raw: Place
     others: dict[str, Place]
@@ -62,7 +65,8 @@ def read_mapping(of: Keys, name: str, tanks: Iterable[str]) -> Mapping | None:
     before = len(of.faults)
     topic = of.text("topic", required=True) or "x"
     tank = of.text("tank")
-    if not re.fullmatch(r"[^+#\s]+", topic) or topic.startswith("levelbook/"):
+    strange = any(re.search(r"[{}+#\s\0]", level) for level in topic.split("/") if level != "{tank}")
+    if strange or topic.startswith(("levelbook/", "$")) or shared(topic, OWN):
         of.fault(
             "topic",
             f'must be a topic with {{tank}} for the level that names the tank, like "meadow/{{tank}}/up", but is "{topic}"',
@@ -76,7 +80,8 @@ def read_mapping(of: Keys, name: str, tanks: Iterable[str]) -> Mapping | None:
     for one in [*devices.values(), *([tank] if tank else [])]:
         if one not in tanks:
             of.fault("devices" if tank is None else "tank", f"there is no tank '{one}' in this file; write [tank.{one}]")
-    readings = _steps(of, "readings", of.text("readings"))
+    readings = of.text("readings")
+    to_readings = None if readings is None else _steps(of, "readings", readings.removeprefix("/"))
     signal, raw = _raw(of)
     others = {
         key: place for key, (dimension, unit) in OTHERS.items() if (place := _place(of, key, dimension, unit)) is not None
@@ -86,6 +91,7 @@ def read_mapping(of: Keys, name: str, tanks: Iterable[str]) -> Mapping | None:
     if kind not in FORMATS and "%" not in kind:
         of.fault("time_format", f'must be one of {", ".join(FORMATS)}, or a pattern like "%d.%m.%Y %H:%M:%S", but is "{kind}"')
     zone = _zone(of, kind)
+    _pattern(of, kind)
     seq, life = _place(of, "seq", None), _place(of, "life", None)
     if life is not None and seq is None:
         of.fault("seq", "is missing, and life is told: a reading's identity is both of them, or neither")
@@ -93,8 +99,33 @@ def read_mapping(of: Keys, name: str, tanks: Iterable[str]) -> Mapping | None:
     if len(of.faults) > before or raw is None or time is None:
         return None
     pattern = re.compile("/".join("(?P<tank>[^/]+)" if level == "{tank}" else re.escape(level) for level in topic.split("/")))
-    return Mapping(name, pattern, topic.replace("{tank}", "+"), tank, {str(k): v for k, v in devices.items()}, readings, signal, raw, others, time,
+    return Mapping(name, pattern, topic.replace("{tank}", "+"), tank, {str(k): v for k, v in devices.items()}, to_readings, signal, raw, others, time,
                    kind, zone, seq, life)  # fmt: skip
+
+
+def shared(one: str, other: str) -> bool:
+    """Whether a topic can be of two patterns.
+
+    >>> shared("meadow/{tank}/up", "meadow/north/+"), shared("meadow/{tank}/up", "meadow/north")
+    (True, False)
+    """
+    pairs = list(zip(one.split("/"), other.split("/"), strict=False))
+    any_level = ("{tank}", "+")
+    return one.count("/") == other.count("/") and all(a == b or a in any_level or b in any_level for a, b in pairs)
+
+
+def _pattern(of: Keys, kind: str) -> None:
+    if kind in FORMATS or "%" not in kind:
+        return
+    try:
+        again = datetime.strptime(SAMPLE.strftime(kind), kind).replace(tzinfo=UTC)
+    except (ValueError, re.error):
+        again = None
+    if again != SAMPLE or "%Z" in kind:
+        of.fault(
+            "time_format",
+            f'must be a pattern of date and time that strptime reads, like "%d.%m.%Y %H:%M:%S" (a zone as %z), but is "{kind}"',
+        )
 
 
 def _raw(of: Keys) -> tuple[str, Place | None]:
@@ -118,6 +149,8 @@ def _place(of: Keys, key: str, dimension: str | None, default: str | None = None
     path = of.text(key, required=required)
     unit = of.text(f"{key}_unit", default) if dimension else None
     if path is None:
+        if dimension and f"{key}_unit" in of:
+            of.fault(key, f"is missing, and {key}_unit is told; write its path, or leave the unit out")
         return None
     a, b = 0.0, 1.0
     if dimension and unit:

@@ -100,7 +100,6 @@ life = "/boot"
         ("unix", str(AT), AT),
         ("%d.%m.%Y %H:%M:%S %z", "01.03.2026 02:00:00 +0200", AT),
         ("%d.%m.%Y %H:%M:%S", "01.03.2026 01:00:00", AT),
-        ("%Y-%m-%d %H:%M", "2025-10-26 02:30", 1761438600),  # the first of the two, when clocks are set back
         ("%Y-%m-%d %H:%M", "2025-07-01 02:00", 1751328000),
     ],
 )
@@ -139,6 +138,47 @@ def test_a_good_reading_beside_bad_ones_is_kept_and_each_reason_names_the_place(
         )
     ):
         assert f"reading {n + 1}: {words}" in faults[n]
+
+
+@pytest.mark.parametrize(("told", "words"), [("2026-03-29 02:30", "never comes"), ("2025-10-26 02:30", "comes twice")])
+def test_a_local_time_that_clocks_skip_or_repeat_is_refused_and_those_around_it_taken(
+    tmp_path: Path, told: str, words: str
+) -> None:
+    """IANA: Europe/Berlin skipped 02:00 to 03:00 on 2026-03-29, and has 02:00 to 03:00 twice on 2025-10-26."""
+    kind = '"%Y-%m-%d %H:%M"\ntime_zone = "Europe/Berlin"'
+    site = site_of(tmp_path, SITE + COUNTS.replace('"unix"', kind).replace('raw = "v"', 'readings = "/"\nraw = "v"'))
+    times = [told, told.replace("02:30", "01:30"), told.replace("02:30", "03:30")]
+    pack = taken(site, "meadow/north/up", json.dumps([{"v": 1, "ts": at} for at in times]).encode(), 1_775_000_000.0)
+    assert len(pack.faults) == 1 and f"reading 1: ts: {told!r} {words} in Europe/Berlin" in pack.faults[0]
+    assert pack.rows[1][0] - pack.rows[0][0] == (1 if words == "never comes" else 3) * 3600 * 10**6
+
+
+@pytest.mark.parametrize("boot", ["\ud800", "a\0b", "", "x" * 65, None, True, {"a": 1}, 1.5])
+def test_a_life_that_no_book_can_keep_is_refused(tmp_path: Path, boot: object) -> None:
+    site = site_of(tmp_path, SITE + COUNTS + 'seq = "n"\nlife = "boot"\n')
+    found, faults = rows(site, {"v": 1, "ts": AT, "n": 1, "boot": boot})
+    assert not found and "reading 1: boot: " in faults[0] and faults[0].encode()
+
+
+@pytest.mark.parametrize("raw", ["1_000", "nan", "1e999", "\u0661", "0x1F", ""])
+def test_text_that_is_no_plain_number_is_refused(tmp_path: Path, raw: str) -> None:
+    found, faults = rows(site_of(tmp_path, SITE + COUNTS), {"v": raw, "ts": AT})
+    assert not found and "reading 1: v: " in faults[0]
+
+
+@pytest.mark.parametrize("told", ["2026-03-01", "2026-W09-7T00:00:00Z", "20260301T000000Z", "2026-03-01T00:00:00"])
+def test_a_time_that_is_not_of_rfc_3339_is_refused(tmp_path: Path, told: str) -> None:
+    found, faults = rows(site_of(tmp_path, SITE + COUNTS.replace("unix", "rfc3339")), {"v": 1, "ts": told})
+    assert not found and "is no time as rfc3339 tells it" in faults[0]
+
+
+def test_a_payload_that_no_book_could_keep_is_quarantined_and_the_listener_goes_on(broker: Broker, tmp_path: Path) -> None:
+    site = site_of(tmp_path, SITE + f"[mqtt]\nport = {broker.port}\n" + COUNTS + 'seq = "n"\nlife = "boot"\n')
+    with listening(site) as listener, client(broker) as other:
+        for n, boot in enumerate(("\ud800", "a")):
+            other.publish("meadow/north/up", json.dumps({"v": 1, "ts": AT, "n": n, "boot": boot}), qos=1)
+        eventually(lambda: listener.tally.packs == 2)
+    assert stored(site) == [1] and "boot" in quarantined(site)[0].reason
 
 
 @pytest.mark.parametrize("payload", [b"", b"\xff", b"[NaN]", b"[" * 100_000, b'{"v": 1e999, "ts": 1}', b"{}", b"7"])
