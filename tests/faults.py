@@ -21,7 +21,9 @@ class Mosquitto:
             probe.bind(("127.0.0.1", 0))
             self.port = probe.getsockname()[1]
         self.configuration = folder / "m.conf"
-        self.configuration.write_text(f"listener {self.port} 127.0.0.1\nallow_anonymous true\nlog_type error\nuser root\n")
+        self.configuration.write_text(
+            f"listener {self.port} 127.0.0.1\nallow_anonymous true\nmax_queued_messages 100000\nlog_type error\nuser root\n"
+        )
 
     def start(self) -> None:
         self.child = subprocess.Popen([self.program, "-c", str(self.configuration)], stderr=subprocess.DEVNULL)

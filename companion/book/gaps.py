@@ -15,11 +15,12 @@ SELECT t.word, l.word, last, next, after_us, before_us, g.oldest FROM (
     SELECT tank, life, last, end_us AS after_us, lead(first) OVER one AS next, lead(start_us) OVER one AS before_us FROM (
         SELECT tank, life, seq AS first, seq AS last, time_us AS start_us, time_us AS end_us FROM reading
         UNION ALL SELECT tank, life, seq, seq, NULL, NULL FROM refused
-        UNION ALL SELECT tank, life, first, last, start_us, end_us FROM run) AS runs
+        UNION ALL SELECT tank, life, first, last, start_us, end_us FROM run
+        UNION ALL SELECT tank, life, -1, -1, NULL, NULL FROM logger) AS runs
     WINDOW one AS (PARTITION BY tank, life ORDER BY first, last)) AS holes
 JOIN name t ON t.id = tank JOIN name l ON l.id = life LEFT JOIN logger g USING (tank, life)
 WHERE next > last + 1 AND l.word NOT IN ('file', 'wire') ORDER BY t.word, after_us, l.word, last
-"""  # a file's and a strange logger's seqs are times
+"""  # a file's and a strange logger's seqs are times; a logger of ours that was heard began at 0
 
 
 @dataclass(frozen=True)
