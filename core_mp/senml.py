@@ -53,6 +53,8 @@ class Pack:
     def say(self, name, value):
         """What the logger says of itself: a whole number or a text; False where there is no room."""
         end = self._end
+        if isinstance(value, str):
+            value = value.replace("\\", "/").replace('"', "'")  # or the pack were no JSON
         self._put((',{"n":"%s","v%s}' % (name, 's":"%s"' % value if isinstance(value, str) else '":%d' % value)).encode())
         return self._fits(end)
 

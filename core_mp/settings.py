@@ -51,16 +51,16 @@ class Settings:
 
     def take(self, message):
         """Settings from the desk: True where they are in use from now on, False where they were already, or are refused."""
-        before = self.values
+        before = self.values, self.core, self.version
         try:
             self._check(message)
-            if self.values is before:
+            if self.values is before[0]:
                 return False
             with open(self._path(1 - self._file), "wb") as f:
                 f.write(message)
-        except (ValueError, OSError, MemoryError) as error:
-            self._use(before)
-            self.refused = "the flash is full" if isinstance(error, OSError) else str(error)
+        except Exception as error:  # whatever the message holds, it must not stop a logger
+            self.values, self.core, self.version = before
+            self.refused = "the flash is full" if isinstance(error, OSError) else str(error) or "no memory for it"
             return False
         self._file = 1 - self._file
         self.refused = None

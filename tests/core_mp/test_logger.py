@@ -331,9 +331,12 @@ def test_ticks_that_begin_again_are_no_matter(tmp_path: Path) -> None:
 # Settings from the desk
 
 
-def settings(version: int = 2, **told: object) -> bytes:
-    body = json.dumps({"tank": "north", "version": version} | told).encode()
+def signed(body: bytes) -> bytes:
     return hashlib.sha256(body).hexdigest().encode() + b"\n" + body
+
+
+def settings(version: int = 2, **told: object) -> bytes:
+    return signed(json.dumps({"tank": "north", "version": version} | told).encode())
 
 
 def test_settings_of_the_desk_are_used_kept_and_told(bench: Bench) -> None:
@@ -369,6 +372,10 @@ def test_settings_of_the_desk_are_used_kept_and_told(bench: Bench) -> None:
         (settings(limits=[5, 4, 3, 2, 1, 0]), "rise"),
         (settings(limits=[0, 40000, 41000, 42000, 43000, 65535]), "lie within limits"),
         (settings(host="elsewhere"), "unknown key"),
+        (signed(b"[" * 3000), ""),
+        (signed(b'{"a":' * 3000), ""),
+        (signed(b"[]"), "not for this tank"),
+        (signed(b"\xff\xfe"), ""),
     ],
 )
 def test_bad_settings_are_refused_whole_and_said_so(bench: Bench, message: bytes, why: str) -> None:

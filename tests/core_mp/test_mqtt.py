@@ -190,3 +190,19 @@ def test_tls_with_a_ca_is_spoken_and_a_wrong_ca_or_password_is_refused(tmp_path:
     finally:
         broker.kill()
         broker.wait()
+
+
+def test_a_message_too_long_for_a_board_is_cut_off_and_the_connection_goes_on(broker: Broker) -> None:
+    """A retained one would otherwise end every connection, and with it the logger."""
+    says, hears = Client(broker.host, broker.port, "says"), Client(broker.host, broker.port, "hears")
+    says.connect()
+    says.publish("levelbook/north/settings", "x" * 50_000, True)
+    hears.connect()
+    hears.subscribe("levelbook/north/settings")
+    came: list[tuple[str, bytes]] = []
+    while not came:
+        came = hears.messages(2000)
+    assert came[0][0] == "levelbook/north/settings" and 4000 < len(came[0][1]) < 4096
+    says.publish("levelbook/north/settings", "short")
+    assert hears.messages(2000) == [("levelbook/north/settings", b"short")]
+    hears.ping()

@@ -42,6 +42,7 @@ def test_a_reading_that_has_no_room_leaves_the_pack_as_it_was() -> None:
     assert added == [True, False, False, False, False]
     assert bytes(pack.end()).decode() == senml.pack("north", "counts", "a", 0, [(0, 1767225600, 7000, 9.5, None, None, None)])
     pack.begin(1767225600, "a", 0)
+    assert pack.say("refused", 'a "quote" and \\escape') and json.loads(bytes(pack.end()))[-1]["vs"] == "a 'quote' and /escape"
     pack.say("refused", "x" * 300)
     assert len(pack.end()) <= 250
 
