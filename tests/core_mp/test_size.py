@@ -117,5 +117,5 @@ def test_a_hundred_days_leave_the_heap_as_the_first(tmp_path: Path) -> None:
     used = [day[1] for day in days]
     assert len(days) == 100 and max(used[50:]) <= max(used[:20])
     _, used, seq, oldest, dropped, version = days[-1]
-    assert used <= 40 * 1024  # where words have 32 bits, about half
+    assert used <= 40 * 1024
     assert seq > 143_000 and oldest >= seq - 3 and dropped == 0 and version == 100
