@@ -27,7 +27,7 @@ class Logger:
     Attributes: troubles (how often, by name), figures (of the last reading: status bits, pressure_pa, level_m, volume_m3, grade_m).
     """
 
-    def __init__(self, settings, spool, clock, client, sensor, network=None, watchdog=None, size=3000):
+    def __init__(self, settings, spool, clock, client, sensor, network=None, watchdog=None, size=2048):
         self.settings, self.spool, self.clock, self.client = settings, spool, clock, client
         self.sensor, self.network, self.watchdog = sensor, network, watchdog
         self.troubles = {"sensor": 0, "clock": 0, "flash": 0, "link": 0, "settings": 0}

@@ -86,15 +86,18 @@ def test_level_to_volume_and_back_is_the_level(pieces: list[tuple[float, float]]
     assert table.level(table.volume(level)) == pytest.approx(level, rel=1e-9, abs=1e-9)
 
 
+ROUNDING = 1e-9  # m3: a line is told from level 0, so a steep one far up is a small difference of large numbers
+
+
 @given(steps, st.floats(-5.0, 200.0), st.floats(-5.0, 200.0))
 def test_more_level_is_never_less_volume(pieces: list[tuple[float, float]], one: float, other: float) -> None:
     table = StrappingTable(*(np.cumsum(column).tolist() for column in zip(*pieces, strict=True)))
     low, high = sorted((one, other))
-    assert table.volume(low) <= table.volume(high)
+    assert table.volume(low) <= table.volume(high) + ROUNDING
 
 
 @given(steps, st.floats(-5.0, 200.0))
 def test_the_search_finds_the_same_piece_as_numpy(pieces: list[tuple[float, float]], level: float) -> None:
     levels, volumes = (np.cumsum(column) for column in zip(*pieces, strict=True))
     ours = StrappingTable(levels.tolist(), volumes.tolist()).volume(level)
-    assert ours == pytest.approx(float(np.interp(level, levels, volumes)), rel=1e-12)
+    assert ours == pytest.approx(float(np.interp(level, levels, volumes)), rel=1e-12, abs=ROUNDING)
